@@ -1,0 +1,188 @@
+//! What one analysis found, as plain data: rings, circuit values, cycles and doubts. Absent values are `None`, and a
+//! doubt says why.
+
+use crate::quantity::Measured;
+use serde::{Deserialize, Serialize};
+
+/// What the analysis may know about the board and the probe; all SI. Everything is optional: less is found without it.
+#[derive(Debug, Clone, Default, PartialEq, Serialize, Deserialize)]
+pub struct BoardFacts {
+    /// Primary self-inductance in henry (a stated tolerance enters as a rectangular distribution).
+    pub primary_inductance_h: Option<Measured>,
+    /// Capacitance of the probe at the drain node in farad.
+    pub probe_capacitance_f: Option<Measured>,
+}
+
+/// How a recording is to be read.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum Subject {
+    /// The drain voltage of a switching converter.
+    Drain,
+    /// A bare ring-down without switching cycles.
+    RingDown,
+}
+
+/// Everything one analysis found. Quantities are SI with the unit in the name.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Findings {
+    /// Relaxation ring, combined over the rings of the record (in `RingDown`, the one ring).
+    pub relaxation_ring: Option<Ring>,
+    /// Leakage ring, combined over the rings of the record.
+    pub leakage_ring: Option<Ring>,
+    /// Small-signal capacitance of the drain node at the bulk voltage, probe included.
+    pub node_capacitance_f: Option<Measured>,
+    /// Leakage inductance referred to the primary.
+    pub leakage_inductance_h: Option<Measured>,
+    /// Reflected output voltage on the plateau at the demagnetisation knee.
+    pub reflected_voltage_v: Option<Measured>,
+    /// Bulk voltage during the relaxation ring (its centre).
+    pub bulk_voltage_v: Option<Measured>,
+    /// Highest drain voltage in the record.
+    pub peak_drain_voltage_v: Option<Measured>,
+    /// Average rate of turn-ons in the record.
+    pub turn_on_rate_hz: Option<Measured>,
+    /// Peak-to-peak of the cycle period over the mean is not enough to say: every cycle as it was classified.
+    pub cycles: Vec<Cycle>,
+    /// Every ring that was fitted, accepted or not: what the report draws.
+    pub ring_fits: Vec<RingFit>,
+    /// Typed reasons to trust a value less, or not at all.
+    pub doubts: Vec<Doubt>,
+}
+
+/// Parameters of a ring.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct Ring {
+    /// Undamped frequency, `sqrt(wd^2 + gamma^2) / 2 pi`.
+    pub frequency_hz: Measured,
+    /// Frequency as it rings.
+    pub damped_frequency_hz: Measured,
+    /// Envelope decay rate gamma in 1/s.
+    pub decay_per_s: Measured,
+    /// `w0 / (2 gamma)`.
+    pub quality_factor: Measured,
+}
+
+/// One switching cycle: from a turn-on to the next.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct Cycle {
+    /// Turn-on, in the time of the record.
+    pub start_s: f64,
+    /// Turn-off.
+    pub turn_off_s: f64,
+    /// End of demagnetisation; `None` in continuous conduction or where the record ends before it.
+    pub end_of_demagnetisation_s: Option<f64>,
+    /// Next turn-on, or the end of the record.
+    pub end_s: f64,
+    /// Conduction mode.
+    pub mode: CycleMode,
+}
+
+/// Conduction mode of one cycle.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum CycleMode {
+    /// The secondary still conducts at the next turn-on.
+    Continuous,
+    /// The relaxation ring is cut by the next regular turn-on.
+    Discontinuous,
+    /// At least one following switching period was left out: the relaxation ring runs on.
+    Skipped,
+    /// The record begins or ends inside the cycle, so that its mode cannot be told.
+    Incomplete,
+}
+
+/// Which ring of the drain waveform.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum RingKind {
+    /// Primary inductance with the node capacitance, after demagnetisation.
+    Relaxation,
+    /// Leakage inductance with the node capacitance, after the clamp's release.
+    Leakage,
+}
+
+/// One fitted ring: `v(t) = offset + slope t + amplitude exp(-decay t) cos(2 pi damped_frequency t + phase)`, with `t`
+/// counted from `start_s`.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct RingFit {
+    /// Which ring.
+    pub kind: RingKind,
+    /// Start of the fitted window in the time of the record; `t = 0` of the model.
+    pub start_s: f64,
+    /// End of the fitted window.
+    pub end_s: f64,
+    /// Parameters in the order of [`RingFit::PARAMETERS`], SI.
+    pub parameters: [f64; 6],
+    /// Covariance of the parameters, row by row.
+    pub covariance: Vec<f64>,
+    /// Standard deviation of the residuals in volts.
+    pub residual_v: f64,
+    /// Why the iteration stopped.
+    pub stopped: String,
+    /// Whether the ring was accepted; a doubt says why not.
+    pub accepted: bool,
+}
+
+impl RingFit {
+    /// Names of the parameters, in order.
+    pub const PARAMETERS: [&'static str; 6] =
+        ["amplitude_v", "decay_per_s", "damped_frequency_hz", "phase_rad", "offset_v", "slope_v_per_s"];
+
+    /// The model at `t_s` seconds after [`RingFit::start_s`], in volts.
+    pub fn model_v(&self, t_s: f64) -> f64 {
+        let [amplitude, decay, frequency, phase, offset, slope] = self.parameters;
+        offset
+            + slope * t_s
+            + amplitude * (-decay * t_s).exp() * (std::f64::consts::TAU * frequency * t_s + phase).cos()
+    }
+}
+
+/// A typed reason to trust a value less or not at all.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Doubt {
+    /// Which kind.
+    pub name: DoubtName,
+    /// One sentence: what was seen, and what to change on the bench.
+    pub sentence: String,
+}
+
+/// Kinds of doubt.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum DoubtName {
+    /// Samples stand at the end of the vertical range.
+    Clipped,
+    /// The vertical step is large against the ring.
+    CoarseSteps,
+    /// Fewer samples a ring period than a fit needs.
+    TooFewPoints,
+    /// Fewer ring periods than a fit needs.
+    TooFewPeriods,
+    /// No relaxation ring stands in the record.
+    NoRelaxationRing,
+    /// No leakage ring could be told from the plateau.
+    NoLeakageRing,
+    /// No ring at all: noise, or an aperiodic decay.
+    NoRing,
+    /// One damped sinusoid does not describe the record.
+    NotOneRing,
+    /// No switching cycles were recognised.
+    NoSwitchingCycles,
+    /// Every cycle is in continuous conduction.
+    ContinuousConduction,
+    /// The waveform collapses periodically: protection or restart, not regulation.
+    ProtectionOrRestart,
+    /// The ring frequency moves with amplitude: the node capacitance depends on voltage.
+    AmplitudeDependent,
+    /// The covariance could not be trusted.
+    CovarianceUnusable,
+    /// The board facts needed for a circuit value were not given.
+    BoardFactMissing,
+    /// A textbook relation was used where the node's capacitance at the plateau is not known.
+    TextbookValue,
+    /// The mean of the record drifts.
+    Drifting,
+    /// Simulated or played-back data.
+    Simulated,
+}

@@ -1,0 +1,202 @@
+//! What happens in a run, as plain data. The journal is these events, one JSON line each.
+
+use crate::instrument::{Identity, LoadReading, RawWaveform, SourceReading};
+use ringstep_analysis::{findings::Findings, quantity::Measured};
+use serde::{Deserialize, Serialize};
+
+/// One event of a run. Newer versions add variants and optional fields; they never change the meaning of old ones.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[serde(tag = "event", rename_all = "snake_case")]
+pub enum Event {
+    /// The run began.
+    RunStarted {
+        /// Identifier of the run (UUID version 7).
+        run: String,
+        /// Version of this program.
+        software_version: String,
+        /// Whether any instrument declares itself simulated or played back.
+        simulated: bool,
+    },
+    /// One line of the preflight: what was checked and how it came out.
+    PreflightChecked {
+        /// What was checked.
+        check: String,
+        /// Whether it holds.
+        passed: bool,
+        /// The figures and the reason.
+        detail: String,
+    },
+    /// An instrument answered and its driver was found.
+    InstrumentIdentified {
+        /// Role at the station: `scope`, `load`, `source`.
+        role: String,
+        /// Who it is.
+        identity: Identity,
+    },
+    /// A line voltage was switched on or changed.
+    LineSet {
+        /// Root-mean-square line voltage.
+        line_v: f64,
+        /// Line frequency.
+        frequency_hz: f64,
+    },
+    /// Output, bulk and clamp level stopped moving.
+    Settled {
+        /// Line voltage.
+        line_v: f64,
+        /// Time waited.
+        waited_s: f64,
+        /// Load reading.
+        load: LoadReading,
+        /// Source reading, where the source measures.
+        source: Option<SourceReading>,
+    },
+    /// One acquisition is on disk.
+    Captured(Capture),
+    /// One step of the load: what was set, what was measured, and which cycles were seen.
+    LoadStepped(LoadStep),
+    /// One point (line voltage) is finished and on disk.
+    PointFinished(Point),
+    /// One point could not be measured.
+    PointRefused {
+        /// Index of the point in the plan, from zero.
+        index: usize,
+        /// Line voltage.
+        line_v: f64,
+        /// Why, and what to change.
+        reason: String,
+    },
+    /// Something worth telling that stops nothing.
+    Noted {
+        /// One sentence.
+        note: String,
+    },
+    /// Source off, load off: what was confirmed.
+    SafeOff {
+        /// Why: `finished`, `stopped`, or the error.
+        reason: String,
+        /// Whether the source confirmed that its output is off.
+        source_off: bool,
+        /// Whether the load confirmed that its input is off.
+        load_off: bool,
+    },
+    /// The run ended.
+    RunEnded {
+        /// How.
+        outcome: Outcome,
+        /// The error or refusal, where there was one.
+        message: Option<String>,
+    },
+}
+
+/// How a run ended.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum Outcome {
+    /// Every point of the plan was measured.
+    Complete,
+    /// Some points were refused.
+    Partial,
+    /// Refused before or after power: nothing could be measured.
+    Refused,
+    /// Stopped by the operator.
+    Stopped,
+    /// An error ended it.
+    Failed,
+}
+
+/// What a capture was taken for.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum Purpose {
+    /// Several switching cycles, to classify them.
+    Survey,
+    /// One relaxation ring at full rate.
+    RelaxationRing,
+    /// One leakage ring at full rate.
+    LeakageRing,
+}
+
+/// One acquisition and where it lies in the run folder.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Capture {
+    /// Number in the run, from zero; names its file `captures/0007.parquet`.
+    pub number: usize,
+    /// Index of the point, from zero.
+    pub point: usize,
+    /// What for.
+    pub purpose: Purpose,
+    /// Line voltage set.
+    pub line_v: f64,
+    /// Load current set.
+    pub load_a: f64,
+    /// Which repeat of the same setting, from zero.
+    pub repeat: usize,
+    /// Scale and format; the payload is in the file.
+    pub waveform: RawWaveform,
+    /// SHA-256 of the file, hexadecimal.
+    pub sha256: String,
+}
+
+/// One step of the load.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct LoadStep {
+    /// Index of the point, from zero.
+    pub point: usize,
+    /// Current set.
+    pub set_a: f64,
+    /// Load reading.
+    pub load: LoadReading,
+    /// Cycles seen, by mode: continuous, discontinuous, skipped.
+    pub cycles: [usize; 3],
+    /// Relaxation-ring time visible after the longest cycle, in ring periods where the ring was fitted.
+    pub visible_ring_periods: Option<f64>,
+    /// Number of the survey capture.
+    pub survey: usize,
+}
+
+/// One point of the plan with its values.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Point {
+    /// Index of the point, from zero.
+    pub index: usize,
+    /// Line voltage set.
+    pub line_v: f64,
+    /// Load current at which the rings were captured.
+    pub load_a: f64,
+    /// Load power measured there.
+    pub load_w: f64,
+    /// Highest load current at which cycles were skipped, and lowest at which none were: the boundary lies between.
+    pub boundary_load_a: Option<[f64; 2]>,
+    /// Combined values of the point: repeats of the relaxation ring and the leakage ring put together.
+    pub values: PointValues,
+    /// Findings of each capture, by capture number.
+    pub findings: Vec<(usize, Findings)>,
+}
+
+/// Combined values of one point; `None` with a doubt in `findings` where a value can't be had.
+#[derive(Debug, Clone, Default, PartialEq, Serialize, Deserialize)]
+pub struct PointValues {
+    /// Undamped relaxation-ring frequency.
+    pub relaxation_frequency_hz: Option<Measured>,
+    /// Quality factor of the relaxation ring.
+    pub relaxation_quality_factor: Option<Measured>,
+    /// Undamped leakage-ring frequency.
+    pub leakage_frequency_hz: Option<Measured>,
+    /// Quality factor of the leakage ring.
+    pub leakage_quality_factor: Option<Measured>,
+    /// Node capacitance, probe included.
+    pub node_capacitance_f: Option<Measured>,
+    /// Node capacitance with the probe's share taken out.
+    pub node_capacitance_without_probe_f: Option<Measured>,
+    /// Leakage inductance.
+    pub leakage_inductance_h: Option<Measured>,
+    /// Reflected voltage.
+    pub reflected_voltage_v: Option<Measured>,
+    /// Bulk voltage.
+    pub bulk_voltage_v: Option<Measured>,
+    /// Peak drain voltage seen in any capture of the point.
+    pub peak_drain_voltage_v: Option<Measured>,
+    /// Turn-on rate in the survey at the measuring load.
+    pub turn_on_rate_hz: Option<Measured>,
+}

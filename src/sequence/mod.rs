@@ -1,0 +1,6 @@
+//! The plan carried out step by step on a station, emitting plain events; terminal, record and page only listen.
+
+pub mod event;
+mod plan;
+
+pub use plan::*;
