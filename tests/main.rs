@@ -1,1 +1,4 @@
 //! Integration tests: one module a subject.
+#![allow(clippy::unwrap_used, missing_docs)]
+
+mod need;

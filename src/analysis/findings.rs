@@ -11,6 +11,10 @@ pub struct BoardFacts {
     pub primary_inductance_h: Option<Measured>,
     /// Capacitance of the probe at the drain node in farad.
     pub probe_capacitance_f: Option<Measured>,
+    /// Nominal switching period, or the one learnt at a heavier load, in seconds: the unit in which gaps are counted.
+    pub switching_period_s: Option<f64>,
+    /// Whether the controller leaves out cycles (`false`: it folds its frequency back); `None` where it is not known.
+    pub skips_cycles: Option<bool>,
 }
 
 /// How a recording is to be read.

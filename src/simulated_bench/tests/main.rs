@@ -1,1 +1,5 @@
-//! Integration tests.
+//! Integration tests: one module a subject.
+#![allow(clippy::unwrap_used, missing_docs)]
+
+#[path = "../../../tests/need.rs"]
+mod need;
