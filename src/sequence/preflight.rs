@@ -200,8 +200,7 @@ fn load(station: &Station, board: &Board, plan: &Plan) -> Vec<PreflightCheck> {
             "lowest load of the output",
             plan.load_floor_a >= output.minimum_load_a,
             format!(
-                "the plan steps down to {} A; {} needs {} A to stay in regulation, and a gap out of regulation is no \
-                 skipped cycle",
+                "the plan steps down to {} A; {} needs {} A to stay in regulation, without which a gap is no skipped cycle",
                 plan.load_floor_a, output.name, output.minimum_load_a
             ),
         ),
