@@ -5,6 +5,9 @@
 //! one bench, its files and limits), `sequence` (the plan, step by step). Analysing is the package
 //! [`ringstep_analysis`]. Keeping and showing: `record` (the run folder), `report`.
 
+pub mod files;
 pub mod instrument;
+pub mod scpi;
 pub mod sequence;
 pub mod station;
+pub mod transport;
