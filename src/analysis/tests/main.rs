@@ -3,3 +3,6 @@
 
 #[path = "../../../tests/need.rs"]
 mod need;
+
+mod circuit;
+mod quantity;
