@@ -77,7 +77,8 @@ impl Dialect {
     /// Sets one of our words.
     pub(super) async fn set_word(&self, key: &str, channel: Option<u8>, word: &str) -> Result<(), InstrumentError> {
         let theirs = self.command(key)?.words.get(word).and_then(|words| words.first()).cloned();
-        let theirs = theirs.ok_or_else(|| self.error(Kind::Unexpected, format!("the driver has no word `{word}` for `{key}`")))?;
+        let theirs = theirs
+            .ok_or_else(|| self.error(Kind::Unexpected, format!("the driver has no word `{word}` for `{key}`")))?;
         let command = self.filled(key, Part::Set, channel, &theirs)?;
         self.send(&command).await?;
         let taken = self.text(key, channel).await?;
@@ -162,7 +163,8 @@ impl Dialect {
             Part::Answer => &command.answer,
         };
         let template = template.as_ref();
-        let template = template.ok_or_else(|| self.error(Kind::Unexpected, format!("the driver lacks a part of `{key}`")))?;
+        let template =
+            template.ok_or_else(|| self.error(Kind::Unexpected, format!("the driver lacks a part of `{key}`")))?;
         let channel = channel.map(|channel| channel.to_string()).unwrap_or_default();
         Ok(template.replace("{channel}", &channel).replace("{value}", value).replace("{word}", value))
     }

@@ -63,7 +63,9 @@ impl InstrumentErrorKind {
             Self::NotNew => "check the trigger level against the waveform",
             Self::Incomplete => "wait for the acquisition, or check the trigger level",
             Self::WrongRecord => "check that nobody uses its front panel, and that the driver suits this instrument",
-            Self::NoDriver => "list the drivers with `ringstep drivers`, add one to your folder, or state one in the station file",
+            Self::NoDriver => {
+                "list the drivers with `ringstep drivers`, add one to your folder, or state one in the station file"
+            }
             Self::Unattended => "run attended at a terminal, or give this role an instrument with an interface",
             Self::CalledOff => "start again when ready",
         }

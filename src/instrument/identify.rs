@@ -105,7 +105,8 @@ pub fn identity(answer: &str, address: &str) -> Option<Identity> {
     if maker.is_empty() || model.is_empty() {
         return None;
     }
-    let simulated = answer.to_ascii_uppercase().contains("SIMULATED") || answer.to_ascii_uppercase().contains("PLAYED BACK");
+    let simulated =
+        answer.to_ascii_uppercase().contains("SIMULATED") || answer.to_ascii_uppercase().contains("PLAYED BACK");
     let (driver, address) = (String::new(), address.to_owned());
     Some(Identity { maker, model, serial_number, firmware, driver, address, simulated })
 }

@@ -19,7 +19,9 @@ impl DialectLoad {
     /// The load; refuses a driver for another role.
     pub fn new(dialect: Dialect) -> Result<Self, InstrumentError> {
         let Facts::Load(facts) = dialect.definition().facts.clone() else {
-            return Err(dialect.error(Kind::NoDriver, format!("`{}` is not a driver for loads", dialect.definition().name)));
+            return Err(
+                dialect.error(Kind::NoDriver, format!("`{}` is not a driver for loads", dialect.definition().name))
+            );
         };
         Ok(Self { dialect, facts, range_a: f64::NAN, current_a: 0.0, on: false })
     }
@@ -50,7 +52,8 @@ impl DialectLoad {
         let largest_a = self.facts.current_ranges_a.last().copied().unwrap_or_default();
         let range_a = self.facts.current_ranges_a.iter().copied().find(|range_a| *range_a >= current_a);
         let range_a = range_a.ok_or_else(|| {
-            self.dialect.error(Kind::OutOfRange, format!("{current_a} A were asked for, its largest range is {largest_a} A"))
+            self.dialect
+                .error(Kind::OutOfRange, format!("{current_a} A were asked for, its largest range is {largest_a} A"))
         })?;
         // A range must hold the current that is set at every moment.
         if range_a >= self.current_a {

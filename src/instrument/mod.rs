@@ -12,7 +12,9 @@ mod source;
 
 pub use capability::*;
 pub use check::{VERSION as DRIVER_VERSION, check as check_driver};
-pub use definition::{Command, Converter, Definition, Facts, LoadFacts, PreambleField, RoleKind, ScopeFacts, SourceFacts};
+pub use definition::{
+    Command, Converter, Definition, Facts, LoadFacts, PreambleField, RoleKind, ScopeFacts, SourceFacts,
+};
 pub use dialect::{Dialect, OffSwitch};
 pub use error::{InstrumentError, InstrumentErrorKind};
 pub use identify::{Drivers, DriversError, EMBEDDED, identity};

@@ -2,8 +2,8 @@
 //! complete, and the one promised.
 
 use super::{
-    Converter, Dialect, Exchange, Facts, Horizontal, Identity, InstrumentError, InstrumentErrorKind as Kind, PreambleField,
-    RawWaveform, SampleFormat, Scope, ScopeFacts, Slope, Timing, Trigger, Vertical,
+    Converter, Dialect, Exchange, Facts, Horizontal, Identity, InstrumentError, InstrumentErrorKind as Kind,
+    PreambleField, RawWaveform, SampleFormat, Scope, ScopeFacts, Slope, Timing, Trigger, Vertical,
 };
 use crate::scpi::response;
 use std::time::Duration;
@@ -30,7 +30,9 @@ impl DialectScope {
     /// The scope; refuses a driver for another role, or one that does not know the model's converter.
     pub fn new(dialect: Dialect) -> Result<Self, InstrumentError> {
         let Facts::Scope(facts) = dialect.definition().facts.clone() else {
-            return Err(dialect.error(Kind::NoDriver, format!("`{}` is not a driver for scopes", dialect.definition().name)));
+            return Err(
+                dialect.error(Kind::NoDriver, format!("`{}` is not a driver for scopes", dialect.definition().name))
+            );
         };
         let model = &dialect.identity().model;
         let converter = facts.converters.iter().find(|converter| converter.model.is_match(model)).cloned();

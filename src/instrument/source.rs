@@ -16,7 +16,9 @@ impl DialectSource {
     /// The source; refuses a driver for another role.
     pub fn new(dialect: Dialect) -> Result<Self, InstrumentError> {
         let Facts::Source(facts) = dialect.definition().facts.clone() else {
-            return Err(dialect.error(Kind::NoDriver, format!("`{}` is not a driver for sources", dialect.definition().name)));
+            return Err(
+                dialect.error(Kind::NoDriver, format!("`{}` is not a driver for sources", dialect.definition().name))
+            );
         };
         Ok(Self { dialect, facts })
     }

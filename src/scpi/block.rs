@@ -36,7 +36,9 @@ pub fn parse_header(bytes: &[u8]) -> Parsed<BlockHeader> {
     let digits = match bytes.get(1) {
         None => return Parsed::Incomplete,
         Some(b'0') => {
-            return Parsed::Malformed("`#0` is a block of indefinite length, whose end this wire does not signal".to_owned());
+            return Parsed::Malformed(
+                "`#0` is a block of indefinite length, whose end this wire does not signal".to_owned(),
+            );
         }
         Some(digit @ b'1'..=b'9') => usize::from(digit - b'0'),
         Some(_) => return Parsed::Malformed("a digit follows the `#` of a block".to_owned()),

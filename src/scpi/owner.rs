@@ -21,6 +21,7 @@ pub(super) enum Ask {
     Line,
     Block,
     Reconnection,
+    Closing,
 }
 
 pub(super) enum Reply {
@@ -32,7 +33,10 @@ pub(super) enum Reply {
 pub(super) struct Request {
     pub(super) command: String,
     pub(super) ask: Ask,
+    /// Longest wait for an answer.
     pub(super) patience: Duration,
+    /// Longest pause inside a block.
+    pub(super) stall: Duration,
     pub(super) reply: oneshot::Sender<Result<Reply, Failure>>,
 }
 
@@ -97,8 +101,15 @@ impl Owner {
     }
 
     async fn serve(&mut self, request: &Request) -> Result<Reply, Failure> {
-        if request.ask == Ask::Reconnection {
-            return self.reconnect(Instant::now() + request.patience).await.map(|()| Reply::Done);
+        match request.ask {
+            Ask::Reconnection => {
+                return self.reconnect(Instant::now() + request.patience).await.map(|()| Reply::Done);
+            }
+            Ask::Closing => {
+                self.lose("closed").await;
+                return Ok(Reply::Done);
+            }
+            Ask::Nothing | Ask::Line | Ask::Block => {}
         }
         if request.command.contains(['\n', '\r']) {
             return Err(Failure::new(ScpiErrorKind::Unsendable));
@@ -126,9 +137,9 @@ impl Owner {
         let deadline = Instant::now() + request.patience;
         self.send(&request.command, deadline).await?;
         match request.ask {
-            Ask::Nothing | Ask::Reconnection => Ok(Reply::Done),
             Ask::Line => self.read_line(deadline).await.map(Reply::Line),
-            Ask::Block => self.read_block(deadline).await.map(Reply::Block),
+            Ask::Block => self.read_block(deadline, request.stall).await.map(Reply::Block),
+            Ask::Nothing | Ask::Reconnection | Ask::Closing => Ok(Reply::Done),
         }
         .inspect(|reply| self.learn_identity(&request.command, reply))
     }
@@ -169,7 +180,7 @@ impl Owner {
     }
 
     /// A block, for as long as it keeps moving.
-    async fn read_block(&mut self, mut deadline: Instant) -> Result<Vec<u8>, Failure> {
+    async fn read_block(&mut self, mut deadline: Instant, stall: Duration) -> Result<Vec<u8>, Failure> {
         let (header, length) = loop {
             let blank = self.buffer.iter().take_while(|byte| matches!(byte, b'\r' | b'\n')).count();
             self.buffer.drain(..blank);
@@ -181,12 +192,12 @@ impl Owner {
         };
         while self.buffer.len() < header + length {
             let before = self.buffer.len();
-            deadline = deadline.max(Instant::now() + self.options.stall_timeout);
+            deadline = deadline.max(Instant::now() + stall);
             if self.receive(deadline).await? && self.buffer.len() < header + length {
                 return Err(Failure::with_reply(ScpiErrorKind::Garbled, &self.buffer[..header]));
             }
             if self.buffer.len() > before {
-                deadline = Instant::now() + self.options.stall_timeout;
+                deadline = Instant::now() + stall;
             }
         }
         let rest = self.buffer.split_off(header + length);
@@ -310,7 +321,11 @@ impl Owner {
     async fn reopen(&mut self, deadline: Instant) -> Result<(), Failure> {
         let attempt = deadline.min(Instant::now() + self.options.reply_timeout);
         let opened = self.opener.open(attempt).await;
-        self.link = Some(opened.map_err(|error| Failure { kind: ScpiErrorKind::Unreachable, reply: None, source: Some(error) })?);
+        self.link = Some(opened.map_err(|error| Failure {
+            kind: ScpiErrorKind::Unreachable,
+            reply: None,
+            source: Some(error),
+        })?);
         // On a serial line the rest of an old answer may still be coming.
         self.drop_until_quiet(QUIET, attempt).await?;
         self.send(IDENTITY, attempt).await?;

@@ -87,7 +87,8 @@ pub fn is_word(pattern: &str, answer: &str) -> bool {
     let short_end = pattern.find(|character: char| character.is_ascii_lowercase()).unwrap_or(pattern.len());
     // Digits after the lower-case part belong to both forms, as in CHANnel1.
     let suffix = &pattern[pattern.trim_end_matches(|character: char| character.is_ascii_digit()).len()..];
-    let short = if short_end < pattern.len() { format!("{}{suffix}", &pattern[..short_end]) } else { pattern.to_owned() };
+    let short =
+        if short_end < pattern.len() { format!("{}{suffix}", &pattern[..short_end]) } else { pattern.to_owned() };
     answer.eq_ignore_ascii_case(pattern) || answer.eq_ignore_ascii_case(&short)
 }
 

@@ -83,6 +83,18 @@ impl Session {
         Self::open(self.opener.clone(), options, self.log.clone()).await
     }
 
+    /// A handle on the same session with its own patience.
+    pub fn with_timeouts(&self, reply_timeout: Duration, stall_timeout: Duration) -> Self {
+        let options = SessionOptions { reply_timeout, stall_timeout, ..(*self.options).clone() };
+        Self { options: Arc::new(options), ..self.clone() }
+    }
+
+    /// Closes the link and waits until it is closed; every other handle finds it lost.
+    pub async fn close(self) {
+        self.abandon();
+        let _ = self.ask("", Ask::Closing, Duration::ZERO).await;
+    }
+
     /// Name used in messages.
     pub fn name(&self) -> &str {
         &self.options.name
@@ -162,7 +174,8 @@ impl Session {
     async fn ask(&self, command: &str, ask: Ask, patience: Duration) -> Result<Reply, Box<ScpiError>> {
         let begun = Instant::now();
         let (reply, answer) = oneshot::channel();
-        let request = Request { command: command.to_owned(), ask, patience, reply };
+        let stall = self.options.stall_timeout;
+        let request = Request { command: command.to_owned(), ask, patience, stall, reply };
         let answered = match self.requests.send(request).await {
             Ok(()) => answer.await.ok(),
             Err(_) => None,
@@ -177,13 +190,7 @@ impl Session {
     }
 }
 
-fn located(
-    options: &SessionOptions,
-    address: &str,
-    command: &str,
-    begun: Instant,
-    failure: Failure,
-) -> Box<ScpiError> {
+fn located(options: &SessionOptions, address: &str, command: &str, begun: Instant, failure: Failure) -> Box<ScpiError> {
     Box::new(ScpiError {
         kind: failure.kind,
         instrument: options.name.clone(),

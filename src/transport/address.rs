@@ -27,7 +27,9 @@ pub enum Address {
 
 /// Why a text is not an address.
 #[derive(Debug, Clone, PartialEq, Eq, thiserror::Error)]
-#[error("`{text}` is not an instrument address: {reason}; expected for instance `TCPIP::192.0.2.7::5025::SOCKET` or `ASRL/dev/ttyUSB0::INSTR`")]
+#[error(
+    "`{text}` is not an instrument address: {reason}; expected for instance `TCPIP::192.0.2.7::5025::SOCKET` or `ASRL/dev/ttyUSB0::INSTR`"
+)]
 pub struct AddressError {
     /// The text.
     pub text: String,
@@ -61,7 +63,11 @@ fn parse(text: &str) -> Result<Address, String> {
     for (prefix, kind) in [("USB", "USB instruments"), ("GPIB", "GPIB"), ("VXI", "VXI"), ("PXI", "PXI")] {
         if let Some(board) = strip_prefix_ignoring_case(interface, prefix) {
             require_board(board)?;
-            return if rest.is_empty() { Err(format!("nothing stands after `{interface}`")) } else { Ok(Address::Other { kind }) };
+            return if rest.is_empty() {
+                Err(format!("nothing stands after `{interface}`"))
+            } else {
+                Ok(Address::Other { kind })
+            };
         }
     }
     Err("it begins with none of TCPIP, ASRL, USB, GPIB".to_owned())
@@ -107,7 +113,11 @@ fn tcpip(rest: &str) -> Result<Address, String> {
 }
 
 fn require_board(board: &str) -> Result<(), String> {
-    if board.bytes().all(|byte| byte.is_ascii_digit()) { Ok(()) } else { Err(format!("`{board}` is not a board number")) }
+    if board.bytes().all(|byte| byte.is_ascii_digit()) {
+        Ok(())
+    } else {
+        Err(format!("`{board}` is not a board number"))
+    }
 }
 
 fn strip_prefix_ignoring_case<'a>(text: &'a str, prefix: &str) -> Option<&'a str> {

@@ -83,7 +83,9 @@ impl Opener for Port {
                 #[cfg(not(feature = "visa"))]
                 Address::Other { kind } => Err(LinkError::new(
                     LinkErrorKind::NotSupported,
-                    format!("open: this build reaches raw sockets and serial lines, not {kind}; build it with the feature `visa`"),
+                    format!(
+                        "open: this build reaches raw sockets and serial lines, not {kind}; build it with the feature `visa`"
+                    ),
                 )),
             }
         })
@@ -145,7 +147,9 @@ impl LinkError {
         use io::ErrorKind as Io;
         let kind = match error.kind() {
             Io::ConnectionRefused => LinkErrorKind::Refused,
-            Io::NotFound | Io::HostUnreachable | Io::NetworkUnreachable | Io::AddrNotAvailable => LinkErrorKind::NotFound,
+            Io::NotFound | Io::HostUnreachable | Io::NetworkUnreachable | Io::AddrNotAvailable => {
+                LinkErrorKind::NotFound
+            }
             Io::PermissionDenied | Io::ResourceBusy => LinkErrorKind::Denied,
             Io::TimedOut => LinkErrorKind::Timeout,
             Io::ConnectionReset | Io::ConnectionAborted | Io::BrokenPipe | Io::UnexpectedEof | Io::NotConnected => {

@@ -83,7 +83,11 @@ impl Opener for Scripted {
         });
         let link = ScriptedLink { peer: self.clone(), partial: Vec::new(), arriving: VecDeque::new() };
         Box::pin(async move {
-            if refused { Err(LinkError::new(LinkErrorKind::Refused, "open")) } else { Ok(Box::new(link) as Box<dyn Link>) }
+            if refused {
+                Err(LinkError::new(LinkErrorKind::Refused, "open"))
+            } else {
+                Ok(Box::new(link) as Box<dyn Link>)
+            }
         })
     }
 }

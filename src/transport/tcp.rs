@@ -47,8 +47,8 @@ impl Link for Tcp {
     }
 
     fn close(&mut self) -> Wire<'_, ()> {
-        Box::pin(async move {
-            self.stream.shutdown().await.map_err(|error| LinkError::system("close the socket", error))
-        })
+        Box::pin(
+            async move { self.stream.shutdown().await.map_err(|error| LinkError::system("close the socket", error)) },
+        )
     }
 }
