@@ -1,1 +1,5 @@
-//! placeholder
+//! A simulated bench: an offline flyback converter stepped in time from its circuit equations, and the instruments around
+//! it. It knows nothing of the program that measures it.
+
+pub mod boards;
+pub mod converter;
