@@ -1,5 +1,11 @@
-//! The boards that ship with the bench, invented for the Norrsund Harbour Works: nominal data as a board file would state
-//! it. Fixed; a board is never softened to suit a measurement.
+//! The boards that ship with the bench, invented for the Norrsund Harbour Works. Fixed: a board is never softened to suit a
+//! measurement.
+
+mod harbour;
+mod parts;
+
+pub use harbour::{all, by_name};
+pub use parts::{Clamp, ClampLevel, ControllerParts, Diode, LightLoad, Parts};
 
 /// Kind of clamp on the drain.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -46,47 +52,21 @@ pub struct Nominal {
     pub switching_frequency_hz: f64,
     /// Kind of clamp.
     pub clamp: ClampKind,
-    /// Voltage above the bulk at which the clamp holds the drain.
+    /// Voltage above the bulk at which the clamp holds the drain at full load.
     pub clamp_v: f64,
     /// Kind of controller.
     pub controller: ControllerKind,
 }
 
-/// A board: its name and everything about it.
+/// A board: its name, what its documents state, and what is soldered to it.
 #[derive(Debug, Clone, PartialEq)]
 pub struct BoardModel {
     /// Name.
     pub name: &'static str,
     /// What its documents state.
     pub nominal: Nominal,
-}
-
-static BOARDS: [BoardModel; 1] = [BoardModel {
-    name: "beacon",
-    nominal: Nominal {
-        primary_inductance_h: 700e-6,
-        primary_inductance_tolerance: 0.07,
-        leakage_inductance_h: 12e-6,
-        turns_ratio: 8.0,
-        output_v: 12.0,
-        maximum_load_a: 2.0,
-        minimum_load_a: 0.0,
-        bulk_capacitance_f: 68e-6,
-        drain_rating_v: 650.0,
-        line_range_v: [85.0, 265.0],
-        switching_frequency_hz: 66e3,
-        clamp: ClampKind::ResistorCapacitorDiode,
-        clamp_v: 170.0,
-        controller: ControllerKind::CycleSkipping,
-    },
-}];
-
-/// Every board.
-pub fn all() -> &'static [BoardModel] {
-    &BOARDS
-}
-
-/// The board of that name.
-pub fn by_name(name: &str) -> Option<&'static BoardModel> {
-    BOARDS.iter().find(|board| board.name == name)
+    /// Component values of the power stage, before tolerances.
+    pub parts: Parts,
+    /// Controller.
+    pub controller: ControllerParts,
 }

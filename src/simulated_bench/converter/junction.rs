@@ -1,9 +1,9 @@
-//! Voltage-dependent capacitance: the graded-junction law, and a steep law with a knee. Capacitance, charge and energy.
+//! Voltage-dependent capacitance: the graded-junction law, and a steep law with a knee. Capacitance and charge.
 
 /// A capacitance that depends on the (reverse) voltage across it.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub enum CapacitanceLaw {
-    /// Graded junction, `C0 / (1 + V/Vj)^m`.
+    /// Graded junction, `C0 / (1 + V/Vj)^m`; constant below `-Vj/2`, as circuit simulators continue it into forward bias.
     Junction {
         /// Capacitance at zero volts.
         zero_bias_f: f64,
@@ -26,11 +26,11 @@ pub enum CapacitanceLaw {
 }
 
 impl CapacitanceLaw {
-    /// Small-signal capacitance at `voltage_v`.
+    /// Small-signal capacitance at `voltage_v`, in farad.
     pub fn capacitance_f(&self, voltage_v: f64) -> f64 {
         match *self {
             Self::Junction { zero_bias_f, potential_v, grading } => {
-                let u = 1.0 + (voltage_v / potential_v).max(-0.9);
+                let u = (1.0 + voltage_v / potential_v).max(0.5);
                 if grading == 0.5 { zero_bias_f / u.sqrt() } else { zero_bias_f * u.powf(-grading) }
             }
             Self::Knee { low_f, high_f, knee_v, width_v } => {
@@ -39,19 +39,32 @@ impl CapacitanceLaw {
         }
     }
 
-    /// Charge from zero to `voltage_v`.
+    /// Charge from zero to `voltage_v`, in coulomb.
     pub fn charge_c(&self, voltage_v: f64) -> f64 {
         match *self {
             Self::Junction { zero_bias_f, potential_v, grading } => {
                 let u = 1.0 + voltage_v / potential_v;
-                zero_bias_f * potential_v * (u.powf(1.0 - grading) - 1.0) / (1.0 - grading)
+                let bounded = u.max(0.5);
+                let scale = zero_bias_f * potential_v;
+                scale * (bounded.powf(1.0 - grading) - 1.0) / (1.0 - grading)
+                    + scale * bounded.powf(-grading) * (u - bounded)
             }
             Self::Knee { low_f, high_f, knee_v, width_v } => {
                 let softplus = |x: f64| if x > 30.0 { x } else { x.exp().ln_1p() };
-                low_f * voltage_v
-                    + (high_f - low_f)
-                        * width_v
-                        * (softplus(knee_v / width_v) - softplus((knee_v - voltage_v) / width_v))
+                let knee = softplus(knee_v / width_v) - softplus((knee_v - voltage_v) / width_v);
+                low_f * voltage_v + (high_f - low_f) * width_v * knee
+            }
+        }
+    }
+
+    /// The same law with every capacitance multiplied by `factor`.
+    pub fn scaled(&self, factor: f64) -> Self {
+        match *self {
+            Self::Junction { zero_bias_f, potential_v, grading } => {
+                Self::Junction { zero_bias_f: zero_bias_f * factor, potential_v, grading }
+            }
+            Self::Knee { low_f, high_f, knee_v, width_v } => {
+                Self::Knee { low_f: low_f * factor, high_f: high_f * factor, knee_v, width_v }
             }
         }
     }

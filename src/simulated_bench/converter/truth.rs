@@ -24,8 +24,8 @@ pub enum ConductionMode {
 pub struct CycleTruth {
     /// Gate turn-on.
     pub turn_on_s: f64,
-    /// Gate turn-off.
-    pub turn_off_s: f64,
+    /// Gate turn-off; `None` before it is reached.
+    pub turn_off_s: Option<f64>,
     /// End of secondary conduction; `None` in continuous conduction or before it is reached.
     pub demagnetised_s: Option<f64>,
     /// How the cycle ended.
