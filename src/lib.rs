@@ -8,5 +8,7 @@
 
 pub mod files;
 pub mod instrument;
+pub mod scpi;
 pub mod sequence;
 pub mod station;
+pub mod transport;
