@@ -9,3 +9,4 @@ pub mod circuit;
 pub mod findings;
 pub mod fit;
 pub mod quantity;
+pub mod waveform;

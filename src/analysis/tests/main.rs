@@ -6,3 +6,4 @@ mod need;
 
 mod circuit;
 mod quantity;
+mod waveform;
