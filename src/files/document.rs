@@ -186,7 +186,8 @@ impl<'d, 't> Table<'d, 't> {
                 continue;
             }
             let free = asked.iter().copied().filter(|known| !self.entries.contains_key(*known));
-            let help = closest(word, free).map(|known| format!("did you mean `{known}`?"));
+            let meant = closest(word, free).or_else(|| closest(word, asked.iter().copied()));
+            let help = meant.map(|known| format!("did you mean `{known}`?"));
             let mut known = asked.clone();
             known.sort_unstable();
             known.dedup();
