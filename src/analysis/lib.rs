@@ -7,3 +7,4 @@
 
 pub mod findings;
 pub mod quantity;
+pub mod waveform;

@@ -3,3 +3,4 @@
 
 #[path = "../../../tests/need.rs"]
 mod need;
+mod waveform;
