@@ -3,4 +3,7 @@
 
 #[path = "../../../tests/need.rs"]
 mod need;
+
+mod circuit;
+mod quantity;
 mod waveform;

@@ -19,9 +19,19 @@ fn recordings_decode_by_their_own_headers() {
         ("rlc-two-modes.txt", 4, 0.0, 2e-6, 500, None),
     ] {
         let Some(decoded) = recording(name, &TextOptions::default()) else { continue };
-        println!("{name}: {} {:?} {:?} n {} step {:?} {:?}", decoded.value_column, decoded.value_name, decoded.samples.time(), decoded.samples.volts().len(), decoded.samples.step_v(), decoded.time_column);
+        println!(
+            "{name}: {} {:?} {:?} n {} step {:?} {:?}",
+            decoded.value_column,
+            decoded.value_name,
+            decoded.samples.time(),
+            decoded.samples.volts().len(),
+            decoded.samples.step_v(),
+            decoded.time_column
+        );
         assert_eq!(decoded.value_column, column, "{name}");
-        let TimeAxis::Even { start_s: start, interval_s: interval } = *decoded.samples.time() else { panic!("{name} is even") };
+        let TimeAxis::Even { start_s: start, interval_s: interval } = *decoded.samples.time() else {
+            panic!("{name} is even")
+        };
         assert!((start - start_s).abs() < 1e-12, "{name} starts at {start}");
         assert!((interval / interval_s - 1.0).abs() < 1e-9, "{name} has interval {interval}");
         assert_eq!(decoded.samples.volts().len(), count, "{name}");

@@ -140,7 +140,8 @@ fn text_of(header: &str, key: &str) -> Result<String, NpyError> {
 
 fn shape_of(header: &str) -> Result<Vec<usize>, NpyError> {
     let value = value_of(header, "shape")?;
-    let inside = value.strip_prefix('(').and_then(|rest| rest.split_once(')')).ok_or_else(|| bad("its shape is none"))?.0;
+    let inside =
+        value.strip_prefix('(').and_then(|rest| rest.split_once(')')).ok_or_else(|| bad("its shape is none"))?.0;
     let sizes = inside.split(',').map(str::trim).filter(|size| !size.is_empty());
     sizes.map(|size| size.trim_end_matches('L').parse().map_err(|_| bad("its shape is none"))).collect()
 }

@@ -38,7 +38,8 @@ pub fn detect_step(volts: &[f64]) -> Option<f64> {
     sorted.sort_unstable_by(f64::total_cmp);
     let range = sorted.last()? - sorted.first()?;
     // Rounding in the file (two or three digits) shifts a value by far less than a step of an 8- or 12-bit converter.
-    let mut gaps: Vec<f64> = sorted.windows(2).map(|pair| pair[1] - pair[0]).filter(|&gap| gap > range * 1e-5).collect();
+    let mut gaps: Vec<f64> =
+        sorted.windows(2).map(|pair| pair[1] - pair[0]).filter(|&gap| gap > range * 1e-5).collect();
     if gaps.is_empty() || gaps.len() * 3 > volts.len() {
         return None;
     }

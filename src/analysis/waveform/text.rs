@@ -103,8 +103,8 @@ pub enum TextError {
 
 /// Reads one voltage column of a delimited text.
 ///
-/// Where several columns could be the voltage, the one that swings most (between its 5th and 95th percentile) is taken:
-/// beside gate and current-sense signals that is the drain.
+/// Where several columns could be the voltage, one named after the drain or a capacitor is taken, and else the one that
+/// swings most (between its 5th and 95th percentile): beside gate and current-sense signals that is the drain.
 ///
 /// # Errors
 /// [`TextError`] with line and column.
@@ -177,7 +177,7 @@ impl<'a> Table<'a> {
             return self.locate(column);
         }
         let time = options.time_column.as_ref().map(|column| self.locate(column)).transpose()?;
-        let mut best: Option<(usize, f64)> = None;
+        let mut best: Option<(usize, (bool, f64))> = None;
         for column in (0..self.kinds.len()).filter(|&c| self.kinds[c] == Kind::Numbers && Some(c) != time) {
             let mut sample = self.sampled(column);
             let alone = self.kinds.iter().filter(|&&kind| kind == Kind::Numbers).count() == 1;
@@ -186,8 +186,9 @@ impl<'a> Table<'a> {
             }
             sample.sort_unstable_by(f64::total_cmp);
             let swing = sample[sample.len() * 95 / 100] - sample[sample.len() * 5 / 100];
-            if best.is_none_or(|(_, most)| swing > most) {
-                best = Some((column, swing));
+            let rank = (self.header.named_after_ring_node(column), swing);
+            if best.is_none_or(|(_, most)| rank > most) {
+                best = Some((column, rank));
             }
         }
         best.map(|(column, _)| column).ok_or(TextError::NoData)

@@ -16,8 +16,21 @@ pub(super) struct Header {
 }
 
 const INTERVAL_KEYS: [&str; 15] = [
-    "sample interval", "sampling interval", "horizontal interval", "time interval", "interval", "increment", "x increment",
-    "xincrement", "xincr", "delta t", "dt", "time step", "sampling period", "sample period", "resolution",
+    "sample interval",
+    "sampling interval",
+    "horizontal interval",
+    "time interval",
+    "interval",
+    "increment",
+    "x increment",
+    "xincrement",
+    "xincr",
+    "delta t",
+    "dt",
+    "time step",
+    "sampling period",
+    "sample period",
+    "resolution",
 ];
 const RATE_KEYS: [&str; 5] = ["sample rate", "sampling rate", "sampling frequency", "samplerate", "fs"];
 const START_KEYS: [&str; 9] =
@@ -36,7 +49,8 @@ impl Header {
         }
         // Names stand in the last line that has a text over most columns; a line of nothing but units may follow it.
         let texts = |row: &Vec<&str>| row.iter().filter(|f| !f.is_empty() && layout.number(f).is_none()).count();
-        let wide: Vec<&Vec<&str>> = rows.iter().filter(|row| row.len() + 1 >= columns && texts(row) * 2 >= columns).collect();
+        let wide: Vec<&Vec<&str>> =
+            rows.iter().filter(|row| row.len() + 1 >= columns && texts(row) * 2 >= columns).collect();
         let is_unit_line = |row: &Vec<&str>| row.iter().all(|f| f.is_empty() || unit_of_line(f).is_some());
         let mut named = wide.iter().rev();
         let mut names = named.next();
@@ -89,11 +103,11 @@ impl Header {
         prefix_factor(prefix.trim())
     }
 
-    /// Whether the name of the column says that it holds times.
-    pub(super) fn named_time(&self, column: usize) -> bool {
+    /// Whether the column is named after the drain (`drain`, `V_DS`) or a capacitor (`V_C`): the nodes that ring.
+    pub(super) fn named_after_ring_node(&self, column: usize) -> bool {
         let name = self.names.get(column).map(|name| name.to_lowercase()).unwrap_or_default();
-        let word = name.split(|c: char| !c.is_alphanumeric()).next().unwrap_or_default();
-        matches!(word, "time" | "t" | "x" | "second" | "seconds" | "zeit" | "temps" | "tiempo" | "sequence" | "index")
+        let words = || name.split(|c: char| !(c.is_alphanumeric() || c == '_'));
+        name.contains("drain") || words().any(|word| matches!(word, "vds" | "v_ds" | "v_d" | "vc" | "v_c"))
     }
 }
 
