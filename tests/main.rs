@@ -1,4 +1,5 @@
 //! Integration tests: one module a subject.
 #![allow(clippy::unwrap_used, missing_docs)]
 
+mod files;
 mod need;
