@@ -1,5 +1,8 @@
 //! Integration tests: one module a subject.
 #![allow(clippy::unwrap_used, missing_docs)]
 
+mod cli;
 mod files;
+mod layering;
 mod need;
+mod preflight;
