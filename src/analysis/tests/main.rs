@@ -5,5 +5,6 @@
 mod need;
 
 mod circuit;
+mod recording_flyback;
 mod quantity;
 mod waveform;

@@ -51,7 +51,10 @@ impl Header {
         let texts = |row: &Vec<&str>| row.iter().filter(|f| !f.is_empty() && layout.number(f).is_none()).count();
         let wide: Vec<&Vec<&str>> =
             rows.iter().filter(|row| row.len() + 1 >= columns && texts(row) * 2 >= columns).collect();
-        let is_unit_line = |row: &Vec<&str>| row.iter().all(|f| f.is_empty() || unit_of_line(f).is_some());
+        let is_unit_line = |row: &Vec<&str>| {
+            let units = row.iter().filter(|field| unit_of_line(field).is_some()).count();
+            units > 0 && units + 1 >= texts(row)
+        };
         let mut named = wide.iter().rev();
         let mut names = named.next();
         if let Some(row) = names.filter(|row| is_unit_line(row)) {
