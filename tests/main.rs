@@ -2,4 +2,5 @@
 #![allow(clippy::unwrap_used, missing_docs)]
 
 mod files;
+mod instruments;
 mod need;

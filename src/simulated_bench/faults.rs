@@ -42,8 +42,10 @@ pub struct Fault {
 
 /// A fault that cannot be understood.
 #[derive(Debug, Clone, PartialEq, Eq, thiserror::Error)]
-#[error("fault `{0}` is not of the form INSTRUMENT:KIND@MESSAGE, for instance source:drop@12 \
-         (scope, load, source; drop, garbage, silent, truncate, gone; a serial link cannot drop)")]
+#[error(
+    "fault `{0}` is not of the form INSTRUMENT:KIND@MESSAGE, for instance source:drop@12 \
+         (scope, load, source; drop, garbage, silent, truncate, gone; a serial link cannot drop)"
+)]
 pub struct FaultError(String);
 
 impl FromStr for Fault {

@@ -167,7 +167,8 @@ pub async fn start(options: &Options) -> Result<RunningBench, BenchError> {
     let seed = options.seed;
     let truth = TruthFile::open(options.truth.as_deref()).map_err(failed("open the truth file"))?;
     let bench = SharedBench::new(board, seed, positive("the speed", options.speed)?, probe.capacitance_f, truth);
-    let port = |instrument: Arc<Mutex<dyn Instrument>>, name| Port::new(instrument, FaultPlan::new(&options.faults, name));
+    let port =
+        |instrument: Arc<Mutex<dyn Instrument>>, name| Port::new(instrument, FaultPlan::new(&options.faults, name));
     let scope = Device::new(Scope::new(bench.clone(), seed, model, probe));
     let scope_port = port(Arc::new(Mutex::new(scope)), InstrumentName::Scope);
     let load = Device::new(Load::new(bench.clone(), seed));

@@ -149,7 +149,8 @@ impl Input {
         let read = stream.read(&mut chunk).await?;
         if read == 0 {
             if !self.bytes.is_empty() {
-                port.work(|instrument| instrument.report(ScpiError::unterminated("the link closed within a message"))).await;
+                port.work(|instrument| instrument.report(ScpiError::unterminated("the link closed within a message")))
+                    .await;
             }
             return Ok(false);
         }

@@ -49,7 +49,11 @@ struct Line {
 }
 
 impl AsyncRead for Line {
-    fn poll_read(mut self: Pin<&mut Self>, context: &mut Context<'_>, buffer: &mut ReadBuf<'_>) -> Poll<io::Result<()>> {
+    fn poll_read(
+        mut self: Pin<&mut Self>,
+        context: &mut Context<'_>,
+        buffer: &mut ReadBuf<'_>,
+    ) -> Poll<io::Result<()>> {
         let polled = Pin::new(&mut self.near).poll_read(context, buffer);
         if matches!(polled, Poll::Ready(Ok(()))) {
             // A client may claim the line for itself alone. The claim outlives the client for as long as we hold the far

@@ -91,7 +91,11 @@ pub struct Scope {
 impl Scope {
     /// The scope with its probe on the drain node and nothing on its second channel.
     pub fn new(bench: SharedBench, seed: u64, model: Model, probe: Probe) -> Self {
-        Self { runner: Runner::new(bench, seed, model, probe), settings: Settings::default(), output: Output::default() }
+        Self {
+            runner: Runner::new(bench, seed, model, probe),
+            settings: Settings::default(),
+            output: Output::default(),
+        }
     }
 
     fn set(&mut self, command: Command, call: &Call<'_>) -> Result<(), ScpiError> {

@@ -190,13 +190,7 @@ impl Default for Settings {
             time_position_s: 0.0,
             kind: AcquisitionType::Normal,
             memory: DEPTHS[0],
-            trigger: Trigger {
-                channel: 0,
-                level_v: 0.0,
-                slope: Slope::Positive,
-                sweep: Sweep::Auto,
-                holdoff_s: 0.0,
-            },
+            trigger: Trigger { channel: 0, level_v: 0.0, slope: Slope::Positive, sweep: Sweep::Auto, holdoff_s: 0.0 },
         }
     }
 }
