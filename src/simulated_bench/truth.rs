@@ -79,7 +79,7 @@ pub fn of_window(truth: &Truth, trigger_s: f64, from_s: f64, to_s: f64) -> Value
         .map(|(_, cycle)| {
             json!({
                 "start_s": cycle.turn_on_s - trigger_s,
-                "turn_off_s": cycle.turn_off_s - trigger_s,
+                "turn_off_s": cycle.turn_off_s.map(|t| t - trigger_s),
                 "end_of_demagnetisation_s": cycle.demagnetised_s.map(|t| t - trigger_s),
                 "mode": cycle.mode,
             })
