@@ -34,6 +34,7 @@ impl Bench {
             scope: ScopeRole { role: role(&announced.scope), channel: 1, earthed: true, input_rating_v: 300.0 },
             load: role(&announced.load),
             source: role(&announced.source),
+            load_earthed: false,
             source_isolated: true,
             probe: Probe {
                 factor: 100.0,
@@ -86,7 +87,7 @@ async fn energised(bench: &Bench) -> Connected {
     connected
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn every_role_is_recognised_and_says_that_it_is_simulated() {
     let connected = Bench::start(Options::default()).await.connect().await;
     for (role, identity) in connected.identities() {
@@ -95,7 +96,7 @@ async fn every_role_is_recognised_and_says_that_it_is_simulated() {
     }
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn an_eight_bit_scope_sends_bytes_with_the_scale_that_was_asked_for() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = energised(&bench).await;
@@ -110,7 +111,7 @@ async fn an_eight_bit_scope_sends_bytes_with_the_scale_that_was_asked_for() {
     assert!((325.0..700.0).contains(&peak), "{peak}");
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn a_twelve_bit_scope_sends_words() {
     let bench = Bench::start(Options { scope_bits: 12, ..Options::default() }).await;
     let mut connected = energised(&bench).await;
@@ -121,7 +122,7 @@ async fn a_twelve_bit_scope_sends_words() {
     assert!(codes.iter().all(|code| f64::from(*code) <= waveform.clip_codes[1]));
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn a_record_that_is_not_new_is_refused() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = energised(&bench).await;
@@ -133,7 +134,7 @@ async fn a_record_that_is_not_new_is_refused() {
     assert_eq!(connected.scope.read().await.unwrap_err().kind, InstrumentErrorKind::NotNew);
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn the_load_draws_in_the_smallest_range_and_the_source_reports_what_it_delivers() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = energised(&bench).await;
@@ -150,7 +151,7 @@ async fn the_load_draws_in_the_smallest_range_and_the_source_reports_what_it_del
     assert_eq!(refused.kind, InstrumentErrorKind::OutOfRange, "{refused}");
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn a_source_found_on_is_refused() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = energised(&bench).await;
@@ -159,7 +160,7 @@ async fn a_source_found_on_is_refused() {
     assert!(connected.safe_off.off().await.source.is_confirmed());
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn what_an_instrument_reports_names_the_command() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = bench.connect().await;
@@ -170,7 +171,7 @@ async fn what_an_instrument_reports_names_the_command() {
     assert!(message.contains("CURRent:LIMit 3") && message.contains("-222") && message.contains("SOCKET"), "{message}");
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn every_message_is_logged_and_a_block_by_its_checksum() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = energised(&bench).await;
@@ -186,7 +187,7 @@ async fn every_message_is_logged_and_a_block_by_its_checksum() {
     assert_eq!(serde_json::from_str::<ringstep::transport::ExchangeEntry>(&line).unwrap(), entries[0]);
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn safe_off_confirms_both_and_is_quick() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = energised(&bench).await;
@@ -199,7 +200,7 @@ async fn safe_off_confirms_both_and_is_quick() {
 }
 
 /// Each fault strikes the source or the load while a step is under way; both must end switched off.
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn safe_off_gets_past_every_fault_of_a_link() {
     for fault in [
         "source:drop@40",
@@ -226,7 +227,7 @@ async fn safe_off_gets_past_every_fault_of_a_link() {
     }
 }
 
-#[tokio::test]
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn safe_off_says_what_it_could_not_confirm_within_a_second() {
     let bench = Bench::with_faults(&["source:gone@40"]).await;
     let mut connected = energised(&bench).await;
