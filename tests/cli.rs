@@ -2,7 +2,13 @@
 
 use assert_cmd::Command;
 use serde_json::Value;
-use std::{fs, path::PathBuf};
+use std::{
+    fs,
+    io::{BufRead, BufReader, Write},
+    net::TcpStream,
+    path::PathBuf,
+    process::{Child, Stdio},
+};
 use tempfile::TempDir;
 
 /// The program in a folder that holds the example files of the guide, with one piece of each changed.
@@ -134,4 +140,66 @@ fn the_help_tells_the_exit_codes_and_check_the_cautions() {
     let help = bench.run(&["check", "--help"]).out;
     let unwrapped = help.split_whitespace().collect::<Vec<_>>().join(" ");
     assert!(ringstep::station::CAUTIONS.iter().all(|caution| unwrapped.contains(caution)), "{help}");
+}
+
+/// A started `simulate` and its first line, which names the instruments.
+fn started(arguments: &[&str]) -> (Child, Value) {
+    let mut child = std::process::Command::new(assert_cmd::cargo::cargo_bin("ringstep"))
+        .arg("simulate")
+        .args(arguments)
+        .stdin(Stdio::piped())
+        .stdout(Stdio::piped())
+        .spawn()
+        .unwrap();
+    let mut line = String::new();
+    BufReader::new(child.stdout.as_mut().unwrap()).read_line(&mut line).unwrap();
+    (child, serde_json::from_str(&line).unwrap())
+}
+
+#[test]
+fn the_simulated_bench_answers_as_simulated_and_ends_with_its_standard_input() {
+    let (mut child, bench) = started(&["--board", "foghorn", "--seed", "7"]);
+    assert_eq!((&bench["simulated"], &bench["board"]), (&Value::Bool(true), &Value::from("foghorn")));
+    let address = bench["scope"].as_str().unwrap();
+    let (host, port) = match address.split("::").collect::<Vec<_>>().as_slice() {
+        ["TCPIP", host, port, "SOCKET"] => ((*host).to_owned(), port.parse::<u16>().unwrap()),
+        _ => panic!("{address}"),
+    };
+    let mut scope = TcpStream::connect((host, port)).unwrap();
+    scope.write_all(b"*IDN?\n").unwrap();
+    let mut identity = String::new();
+    BufReader::new(scope).read_line(&mut identity).unwrap();
+    assert!(identity.to_uppercase().contains("SIMULATED"), "{identity}");
+    drop(child.stdin.take());
+    assert!(child.wait().unwrap().success());
+}
+
+#[test]
+fn simulate_lists_its_boards_and_names_them_where_one_is_unknown() {
+    let bench = Bench::new();
+    let list = bench.run(&["simulate", "--list"]);
+    assert_eq!(list.code, Some(0));
+    let unknown = bench.run(&["simulate", "--board", "lighthouse"]);
+    assert_eq!(unknown.code, Some(2));
+    for board in ["beacon", "foghorn", "tidegauge", "winch", "pumphouse", "semaphore"] {
+        assert!(list.out.contains(board) && unknown.err.contains(board), "{board}");
+    }
+    assert_eq!(bench.run(&["simulate", "--fault", "scope:smoke@1"]).code, Some(2));
+}
+
+#[test]
+fn drivers_are_listed_and_a_wrong_one_is_told_every_mistake() {
+    let bench = Bench::new();
+    let list = bench.run(&["drivers", "list"]);
+    assert_eq!(list.code, Some(0));
+    assert!(["scope", "load", "source"].iter().all(|role| list.out.contains(role)), "{}", list.out);
+    let driver = PathBuf::from(env!("CARGO_MANIFEST_DIR")).join("drivers/source-ac-scpi.toml");
+    let copy = bench.folder.path().join("source.toml");
+    fs::copy(driver, &copy).unwrap();
+    assert_eq!(bench.run(&["drivers", "check", "source.toml"]).code, Some(0));
+    let text = fs::read_to_string(&copy).unwrap();
+    fs::write(&copy, text.replace("name = ", "nahme = ")).unwrap();
+    let wrong = bench.run(&["drivers", "check", "source.toml"]);
+    assert_eq!(wrong.code, Some(2));
+    assert!(wrong.err.contains("did you mean `name`?"), "{}", wrong.err);
 }

@@ -50,6 +50,12 @@ pub(crate) enum CliError {
         /// Why.
         source: io::Error,
     },
+    /// Something the system refused.
+    #[error("{0}")]
+    Failed(String),
+    /// An argument that can't be used.
+    #[error("{0}")]
+    Usage(String),
     /// Mistakes in files the user wrote; of every file at once.
     #[error("{}", joined(.0))]
     Mistakes(Vec<FileErrors>),
@@ -59,8 +65,8 @@ impl CliError {
     /// The exit code of this kind.
     pub(crate) fn exit(&self) -> Exit {
         match self {
-            Self::Unreadable { .. } => Exit::Failed,
-            Self::Mistakes(_) => Exit::Usage,
+            Self::Unreadable { .. } | Self::Failed(_) => Exit::Failed,
+            Self::Usage(_) | Self::Mistakes(_) => Exit::Usage,
         }
     }
 
@@ -72,7 +78,9 @@ impl CliError {
                 io::ErrorKind::InvalidData => Some("the file must be text in UTF-8"),
                 _ => None,
             },
-            Self::Mistakes(_) => Some("commented examples of the three files stand in the guide, src/guide/examples"),
+            Self::Failed(_) => None,
+            Self::Usage(_) => Some("--help shows what each option takes"),
+            Self::Mistakes(_) => Some("commented examples stand in src/guide/examples, drivers in the folder drivers"),
         }
     }
 
@@ -92,7 +100,7 @@ impl CliError {
     pub(crate) fn to_json(&self) -> Value {
         let mistakes = match self {
             Self::Mistakes(files) => files.iter().flat_map(mistakes_of).collect(),
-            Self::Unreadable { .. } => Vec::new(),
+            _ => Vec::new(),
         };
         json!({ "error": { "message": self.to_string(), "hint": self.hint(), "mistakes": mistakes } })
     }

@@ -1,9 +1,11 @@
 //! The command line: one command a file, and the way from arguments to an exit code.
 
 mod check;
+mod drivers;
 mod error;
 mod inputs;
 mod output;
+mod simulate;
 
 use clap::{ArgAction, Parser, Subcommand};
 use error::{CliError, Exit};
@@ -30,12 +32,16 @@ struct Arguments {
 #[derive(Debug, Subcommand)]
 enum Command {
     Check(check::Check),
+    Drivers(drivers::DriversCommand),
+    Simulate(simulate::Simulate),
 }
 
 impl Command {
     fn run(&self) -> Result<Exit, CliError> {
         match self {
             Self::Check(check) => check.run(),
+            Self::Drivers(drivers) => drivers.run(),
+            Self::Simulate(simulate) => simulate.run(),
         }
     }
 
@@ -43,6 +49,7 @@ impl Command {
     fn json(&self) -> bool {
         match self {
             Self::Check(check) => check.json,
+            Self::Drivers(_) | Self::Simulate(_) => false,
         }
     }
 }
