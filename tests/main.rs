@@ -3,6 +3,7 @@
 
 mod cli;
 mod files;
+mod instruments;
 mod layering;
 mod need;
 mod preflight;
