@@ -6,5 +6,6 @@
 //! [`ringstep_analysis`]. Keeping and showing: `record` (the run folder), `report`.
 
 pub mod instrument;
+pub mod record;
 pub mod sequence;
 pub mod station;
