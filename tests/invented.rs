@@ -25,9 +25,9 @@ const KNEE_S: f64 = 7.0e-6;
 
 pub(crate) fn inputs() -> Inputs {
     Inputs {
-        plan: "name = \"beacon, two line voltages\"\nline = [\"115 V\", \"230 V\"]\n".into(),
-        station: "name = \"Norrsund bench 2\"\n".into(),
-        board: "name = \"beacon\"\n[ratings]\ndrain = \"650 V\"\n".into(),
+        plan: include_str!("../src/guide/examples/plan.toml").into(),
+        station: include_str!("../src/guide/examples/station.toml").into(),
+        board: include_str!("../src/guide/examples/board.toml").into(),
     }
 }
 
