@@ -4,6 +4,8 @@
 mod cli;
 mod files;
 mod instruments;
+mod invented;
 mod layering;
 mod need;
 mod preflight;
+mod record;

@@ -5,6 +5,6 @@
 mod need;
 
 mod circuit;
-mod recording_flyback;
 mod quantity;
+mod recording_flyback;
 mod waveform;
