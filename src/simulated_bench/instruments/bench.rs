@@ -3,7 +3,7 @@
 
 use crate::{
     boards::BoardModel,
-    converter::{LoadDemand, Plant, Stepper},
+    converter::{LoadDemand, Plant},
     truth::TruthFile,
 };
 use rand_chacha::{ChaCha8Rng, rand_core::SeedableRng};
@@ -11,12 +11,6 @@ use std::{
     sync::{Arc, Mutex, MutexGuard, PoisonError},
     time::Instant,
 };
-
-/// Longest stretch of simulated time between two looks at the load's operating voltage.
-const SLICE_S: f64 = 1e-3;
-
-/// Below this voltage an electronic load cannot draw current.
-pub const LOAD_MINIMUM_V: f64 = 1.5;
 
 /// What the line source does.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -78,19 +72,8 @@ impl SharedBench {
 impl Bench {
     fn catch_up(&mut self) {
         let now = Instant::now();
-        let mut remaining = now.duration_since(self.last).as_secs_f64() * self.speed;
+        self.plant.advance(now.duration_since(self.last).as_secs_f64() * self.speed);
         self.last = now;
-        while remaining > 0.0 {
-            let slice = remaining.min(SLICE_S);
-            self.apply_load();
-            self.plant.advance(slice);
-            remaining -= slice;
-        }
-    }
-
-    /// Seed of everything random on this bench.
-    pub fn seed(&self) -> u64 {
-        self.seed
     }
 
     /// The board as it stands.
@@ -113,18 +96,11 @@ impl Bench {
     /// Changes the load.
     pub fn set_draw(&mut self, draw: Draw) {
         self.draw = draw;
-        self.apply_load();
-        self.note_state();
-    }
-
-    fn apply_load(&mut self) {
-        let able = self.plant.output_voltage() >= LOAD_MINIMUM_V;
-        self.plant.set_load(match self.draw {
-            Draw { on: true, demand, .. } if able => demand,
-            Draw { on: true, .. } => LoadDemand::Off,
-            Draw { leakage_ohm, .. } if leakage_ohm.is_finite() => LoadDemand::Resistance(leakage_ohm),
-            Draw { .. } => LoadDemand::Off,
+        self.plant.set_load(match draw {
+            Draw { on: true, demand, .. } => demand,
+            Draw { leakage_ohm, .. } => LoadDemand::Resistance(leakage_ohm),
         });
+        self.note_state();
     }
 
     /// Notes which outputs are on, where that has changed.
@@ -142,11 +118,6 @@ impl Bench {
         };
         let kind = if self.draw.on { kind } else { 3 };
         key(&[self.seed, on.into(), rms_v.to_bits(), frequency_hz.to_bits(), limit_a.to_bits(), kind, level.to_bits()])
-    }
-
-    /// The waveform of the drain node from here on.
-    pub fn stepper(&self, key: u64) -> Stepper {
-        self.plant.stepper(key)
     }
 }
 

@@ -15,10 +15,14 @@ use rand::RngExt;
 use rand_chacha::ChaCha8Rng;
 use rand_distr::{Distribution, StandardNormal};
 use serde_json::Value;
-use std::collections::VecDeque;
+use std::{
+    collections::VecDeque,
+    sync::atomic::{AtomicBool, Ordering},
+};
 
-/// Simulated time that is searched for a trigger, holdoff apart.
-const SEARCH_S: f64 = 25e-3;
+/// Simulated time that is searched for a trigger in one go, holdoff apart; an automatic sweep gives up much sooner.
+const SEARCH_S: f64 = 10e-3;
+const AUTOMATIC_S: f64 = 2e-3;
 
 /// Steadiness of the trigger on a steep edge.
 const JITTER_S: f64 = 0.15e-9;
@@ -38,6 +42,8 @@ pub struct Request<'a> {
     pub seed: u64,
     /// Key of its noise.
     pub key: u64,
+    /// Set when nobody waits for it any more.
+    pub cancelled: &'a AtomicBool,
 }
 
 /// A completed acquisition.
@@ -194,8 +200,12 @@ impl<'a> Trace<'a> {
         let mut edges =
             EdgeDetector::new(trigger.level_v, trigger.slope, hysteresis_v, trigger.holdoff_s, self.start_s);
         // Automatic sweeps free-run at a moment that nothing ties to the waveform.
-        let patience_s = before_s + SEARCH_S * noise.random_range(0.9..1.0) + 2.0 * trigger.holdoff_s.min(SEARCH_S);
+        let search_s = if trigger.sweep == Sweep::Auto { AUTOMATIC_S } else { SEARCH_S };
+        let patience_s = before_s + search_s * noise.random_range(0.9..1.0) + 2.0 * trigger.holdoff_s.min(SEARCH_S);
         loop {
+            if self.request.cancelled.load(Ordering::Relaxed) {
+                return None;
+            }
             let signal = self.advance(stepper);
             let volts = if trigger.channel == 0 { self.front_end.at(&signal) } else { 0.0 };
             let edge = edges.next(signal.time_s, volts).filter(|edge| edge.accepted);

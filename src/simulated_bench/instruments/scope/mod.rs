@@ -3,6 +3,7 @@
 
 pub mod acquisition;
 pub mod front_end;
+pub mod job;
 pub mod runner;
 pub mod settings;
 pub mod trigger;

@@ -2,12 +2,16 @@
 //! that follows from the settings and from how often they were captured before.
 
 use super::{
-    acquisition::{Record, Request},
+    acquisition::Record,
+    job::{Job, Outcome, Task},
     settings::{Model, Probe, Settings, Sweep},
 };
-use crate::instruments::{
-    bench::{SharedBench, key},
-    error::ScpiError,
+use crate::{
+    converter::Plant,
+    instruments::{
+        bench::{SharedBench, key},
+        error::ScpiError,
+    },
 };
 use serde_json::json;
 use std::{
@@ -28,6 +32,14 @@ enum Mode {
     Running,
 }
 
+/// An acquisition under way: what it is counted under, what line and load were, and where it runs.
+struct UnderWay {
+    setting: u64,
+    repeat: u64,
+    bench_setting: u64,
+    job: Job,
+}
+
 /// The acquisition side of a scope.
 pub struct Runner {
     bench: SharedBench,
@@ -37,6 +49,8 @@ pub struct Runner {
     mode: Mode,
     due: Instant,
     tries: u64,
+    under_way: Option<UnderWay>,
+    settled: Option<(u64, Plant)>,
     record: Option<Record>,
     number: u64,
     repeats: HashMap<u64, u64>,
@@ -45,8 +59,20 @@ pub struct Runner {
 impl Runner {
     /// A stopped scope without an acquisition.
     pub fn new(bench: SharedBench, seed: u64, model: Model, probe: Probe) -> Self {
-        let (mode, due) = (Mode::Stopped, Instant::now());
-        Self { bench, seed, model, probe, mode, due, tries: 0, record: None, number: 0, repeats: HashMap::new() }
+        Self {
+            bench,
+            seed,
+            model,
+            probe,
+            mode: Mode::Stopped,
+            due: Instant::now(),
+            tries: 0,
+            under_way: None,
+            settled: None,
+            record: None,
+            number: 0,
+            repeats: HashMap::new(),
+        }
     }
 
     /// The model.
@@ -79,12 +105,12 @@ impl Runner {
 
     /// What the trigger is doing.
     pub fn status(&self, sweep: Sweep) -> &'static str {
-        match self.mode {
-            Mode::Stopped => "STOP",
-            _ if self.tries > 0 => "WAIT",
-            _ if self.record.is_none() => "ARMED",
-            _ if sweep == Sweep::Auto => "AUTO",
-            _ => "TRIGGERED",
+        match (self.mode, &self.record) {
+            (Mode::Stopped, _) => "STOP",
+            (_, None) if self.under_way.is_none() && self.tries == 0 => "ARMED",
+            (_, Some(_)) if sweep == Sweep::Auto => "AUTO",
+            (_, Some(_)) if self.tries == 0 => "TRIGGERED",
+            _ => "WAIT",
         }
     }
 
@@ -101,6 +127,7 @@ impl Runner {
     /// Stops; what is in memory stays.
     pub fn stop(&mut self) {
         self.mode = Mode::Stopped;
+        self.under_way = None;
     }
 
     /// `*RST`: stopped and empty. The count of acquisitions runs on.
@@ -119,40 +146,71 @@ impl Runner {
     fn start(&mut self, mode: Mode) {
         self.mode = mode;
         self.record = None;
+        self.under_way = None;
         self.tries = 0;
         self.due = Instant::now() + ARMING;
     }
 
-    /// Takes an acquisition if its time has come.
+    /// Begins an acquisition if its time has come, or takes the one that is done.
     pub fn service(&mut self, settings: &Settings) {
-        if self.mode == Mode::Stopped || Instant::now() < self.due {
+        if self.mode == Mode::Stopped {
             return;
         }
-        let acquired = self.acquire(settings);
-        self.tries = if acquired { 0 } else { self.tries + 1 };
-        self.due = Instant::now() + PAUSE;
-        if acquired && self.mode == Mode::Single {
-            self.mode = Mode::Stopped;
+        let Some(under_way) = self.under_way.take() else {
+            if Instant::now() >= self.due {
+                self.under_way = Some(self.begin(settings));
+            }
+            return;
+        };
+        if under_way.bench_setting != self.bench.now().setting_key() {
+            // The waveform it looks at is no longer there.
+            self.start(self.mode);
+            return;
+        }
+        match under_way.job.outcome() {
+            Some(outcome) => self.finish(&under_way, outcome),
+            None => self.under_way = Some(under_way),
         }
     }
 
-    fn acquire(&mut self, settings: &Settings) -> bool {
+    fn begin(&mut self, settings: &Settings) -> UnderWay {
         // Running counts apart: how often it came round is a matter of the clock.
         let running = u64::from(self.mode == Mode::Running);
         let bench = self.bench.now();
-        let setting = key(&[settings.key(), bench.setting_key(), self.model.bits.into(), running]);
+        let bench_setting = bench.setting_key();
+        let setting = key(&[settings.key(), bench_setting, self.model.bits.into(), running]);
         let repeat = self.repeats.get(&setting).copied().unwrap_or(0);
-        let capture = key(&[setting, repeat, self.tries]);
-        let stepper = bench.stepper(capture);
-        drop(bench);
-        let request = Request { model: &self.model, probe: self.probe, settings, seed: self.seed, key: capture };
-        let Some(mut record) = request.acquire(stepper) else { return false };
-        self.repeats.insert(setting, repeat + 1);
+        let plant = match self.settled.take().filter(|(setting, _)| *setting == bench_setting) {
+            Some((_, plant)) => plant,
+            None => bench.plant().clone(),
+        };
+        let job = Job::start(Task {
+            model: self.model,
+            probe: self.probe,
+            settings: settings.clone(),
+            seed: self.seed,
+            key: key(&[setting, repeat, self.tries]),
+            plant,
+        });
+        UnderWay { setting, repeat, bench_setting, job }
+    }
+
+    fn finish(&mut self, under_way: &UnderWay, outcome: Outcome) {
+        self.settled = outcome.settled.map(|plant| (under_way.bench_setting, plant));
+        self.due = Instant::now() + PAUSE;
+        let Some(mut record) = outcome.record else {
+            self.tries += 1;
+            return;
+        };
+        self.tries = 0;
+        self.repeats.insert(under_way.setting, under_way.repeat + 1);
         self.number += 1;
         record.number = self.number;
-        self.note(&record, repeat);
+        self.note(&record, under_way.repeat);
         self.record = Some(record);
-        true
+        if self.mode == Mode::Single {
+            self.mode = Mode::Stopped;
+        }
     }
 
     fn note(&self, record: &Record, repeat: u64) {
