@@ -3,3 +3,8 @@
 
 #[path = "../../../tests/need.rs"]
 mod need;
+
+mod boards;
+mod converter;
+mod ngspice;
+mod trace;
