@@ -11,3 +11,7 @@ mod process;
 mod pyvisa;
 mod scope;
 mod wires;
+mod boards;
+mod converter;
+mod ngspice;
+mod trace;
