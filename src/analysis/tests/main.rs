@@ -1,8 +1,10 @@
 //! Integration tests: one module a subject.
-#![allow(clippy::unwrap_used, missing_docs)]
+#![allow(clippy::unwrap_used, missing_docs, unreachable_pub)]
 
 #[path = "../../../tests/need.rs"]
 mod need;
 
+mod acceptance;
 mod circuit;
+mod generate;
 mod quantity;
