@@ -9,3 +9,4 @@ mod layering;
 mod need;
 mod preflight;
 mod record;
+mod report;
