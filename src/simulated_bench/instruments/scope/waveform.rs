@@ -97,10 +97,7 @@ impl Output {
     /// # Errors
     /// -230 if the channel was not acquired.
     pub fn block(&self, record: &Record) -> Result<Vec<u8>, ScpiError> {
-        let payload = self.payload(self.codes(record)?, record.bits);
-        let mut block = block_header(payload.len());
-        block.extend(payload);
-        Ok(block)
+        Ok(definite_block(&self.payload(self.codes(record)?, record.bits)))
     }
 
     fn payload(&self, codes: &[u16], bits: u32) -> Vec<u8> {
@@ -115,10 +112,10 @@ impl Output {
     }
 }
 
-/// The header of a definite-length block of so many bytes.
-fn block_header(length: usize) -> Vec<u8> {
-    let digits = length.to_string();
-    format!("#{}{digits}", digits.len()).into_bytes()
+/// A payload as a definite-length block: `#`, the number of digits, the length in so many digits, the bytes.
+pub fn definite_block(payload: &[u8]) -> Vec<u8> {
+    let digits = payload.len().to_string();
+    [format!("#{}{digits}", digits.len()).as_bytes(), payload].concat()
 }
 
 /// A number with all the digits it needs: scales must not be rounded.
