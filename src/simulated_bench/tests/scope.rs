@@ -345,6 +345,31 @@ fn repeated_captures_differ_in_noise_alone() {
     assert_eq!(fixture.ask("ACQ:NUMB?"), "2");
 }
 
+/// What a board shows at some load once it has settled, however long that took on the clock.
+fn settled_capture(board: &str, load_a: f64, settling: Duration) -> (Vec<u8>, String) {
+    let board = boards::by_name(board).unwrap();
+    let bench = SharedBench::new(board, 11, 30.0, 5e-12, TruthFile::default());
+    let scope = Device::new(Scope::new(bench.clone(), 11, Model::of_bits(12).unwrap(), TRUE_PROBE));
+    let mut fixture = Fixture { bench, scope };
+    fixture.bench.now().set_line(Line { on: true, rms_v: 230.0, frequency_hz: 50.0, limit_a: 3.0 });
+    fixture.bench.now().set_draw(Draw { on: true, demand: LoadDemand::Current(load_a), leakage_ohm: 1e6 });
+    thread::sleep(settling);
+    fixture.tell("CHAN1:PROB 100;SCAL 100;OFFS 300;:TIM:SCAL 20US;:ACQ:POIN 100000");
+    fixture.single();
+    fixture.single();
+    (fixture.payload(), fixture.ask("WAV:PRE?"))
+}
+
+#[test]
+fn captures_of_every_settled_board_do_not_depend_on_the_clock() {
+    for board in boards::all() {
+        let load_a = 0.1 * board.nominal.maximum_load_a;
+        let first = settled_capture(board.name, load_a, Duration::from_millis(700));
+        let second = settled_capture(board.name, load_a, Duration::from_millis(1130));
+        assert!(first == second, "{} captures something else when it is older", board.name);
+    }
+}
+
 fn channel() -> Channel {
     Channel { scale_v: 100.0, probe_factor: 100.0, ..Settings::default().channels[0] }
 }
