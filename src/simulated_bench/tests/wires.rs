@@ -146,7 +146,7 @@ fn a_truncated_block_ends_in_the_middle() {
     }
     scope.send("WAV:DATA?");
     let half = rest(&mut scope);
-    assert!(half.starts_with(b"#510000") && half.len() == (7 + 10_000 + 1) / 2, "{}", half.len());
+    assert!(half.starts_with(b"#510000") && half.len() == 10_008 / 2, "{}", half.len());
     assert_eq!(bench.scope().block("WAV:DATA?").len(), 10_000);
 }
 
@@ -193,6 +193,15 @@ fn options_that_make_no_sense_are_refused_by_name() {
     assert!(refused(Options { speed: 0.0, ..default() }).contains("the speed"));
     assert!(refused(Options { probe_factor: f64::NAN, ..default() }).contains("the probe factor"));
     assert!(refused(Options { truth: Some("/nowhere/truth".into()), ..default() }).contains("open the truth file"));
+}
+
+#[test]
+fn every_board_is_listed_with_a_sentence_and_can_be_started() {
+    for (name, sentence) in process::boards() {
+        assert!(sentence.ends_with('.') && sentence.contains(" A from "), "{sentence}");
+        let bench = TestBench::new(&Options { board: name.into(), ..Options::default() });
+        assert_eq!(bench.announcement().board, name);
+    }
 }
 
 #[test]

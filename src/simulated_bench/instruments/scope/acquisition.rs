@@ -24,8 +24,14 @@ use std::{
 const SEARCH_S: f64 = 10e-3;
 const AUTOMATIC_S: f64 = 2e-3;
 
+/// Kept before the start of a window: longer than any jitter.
+const MARGIN_S: f64 = 1e-6;
+
 /// Steadiness of the trigger on a steep edge.
 const JITTER_S: f64 = 0.15e-9;
+
+/// Acquisitions in an average.
+pub const AVERAGES: u8 = 8;
 
 /// Hysteresis of the trigger in divisions.
 const HYSTERESIS_DIVISIONS: f64 = 0.3;
@@ -142,9 +148,6 @@ impl Request<'_> {
     }
 }
 
-/// Acquisitions in an average.
-const AVERAGES: u8 = 8;
-
 fn normal(noise: &mut ChaCha8Rng) -> f64 {
     StandardNormal.sample(noise)
 }
@@ -250,6 +253,3 @@ impl<'a> Trace<'a> {
         pairs.take(points).collect()
     }
 }
-
-/// Kept before the start of a window: longer than any jitter.
-const MARGIN_S: f64 = 1e-6;

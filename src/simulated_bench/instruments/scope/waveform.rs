@@ -5,7 +5,7 @@
 //! `seconds = (index - xreference) * xincrement + xorigin`, zero being the trigger.
 
 use super::{
-    acquisition::Record,
+    acquisition::{AVERAGES, Record},
     settings::{AcquisitionType, Model},
 };
 use crate::instruments::{error::ScpiError, parameter::nr3};
@@ -75,16 +75,16 @@ impl Output {
             Format::Byte => (0, 8),
             Format::Word => (1, 16),
         };
-        let kind = match settings.kind {
-            AcquisitionType::Normal => 0,
-            AcquisitionType::Peak => 1,
-            AcquisitionType::Average => 2,
+        let (kind, count) = match settings.kind {
+            AcquisitionType::Normal => (0, 1),
+            AcquisitionType::Peak => (1, 1),
+            AcquisitionType::Average => (2, AVERAGES),
         };
         let codes_per_division = Model::of_bits(8).map_or(25.0, |model| model.codes_per_division());
         let increment_v = channel.scale_v / codes_per_division / f64::from(1_u32 << (bits - 8));
         let reference = if self.unsigned { 1_u32 << (bits - 1) } else { 0 };
         Ok(format!(
-            "{format},{kind},{points},1,{},{},0,{},{},{reference}",
+            "{format},{kind},{points},{count},{},{},0,{},{},{reference}",
             nr3(record.interval_s()),
             exact(settings.start_s()),
             exact(increment_v),
