@@ -337,4 +337,7 @@ fn the_source_says_when_it_limits_its_current() {
     source.message(b"CURR:LIM 0.05");
     settle();
     assert_eq!(ask(&mut source, "STAT:QUES:COND?;*STB?"), "2;24");
+    source.message(b"CURR:LIM 3");
+    settle();
+    assert_eq!(ask(&mut source, "STAT:QUES:COND?;*STB?"), "0;16");
 }
