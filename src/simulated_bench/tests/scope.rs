@@ -107,7 +107,7 @@ proptest! {
     }
 
     #[test]
-    fn the_window_always_fits_the_memory(scale_s in 2e-9..10e-3_f64, memory in 1.0..1e6_f64) {
+    fn the_window_always_fits_the_memory(scale_s in 2e-9..5e-3_f64, memory in 1.0..1e6_f64) {
         let mut fixture = Fixture::new(8, None);
         fixture.tell(&format!("TIM:SCAL {scale_s:E};:ACQ:POIN {memory}"));
         let (rate_hz, points) = (fixture.number("ACQ:SRAT?"), fixture.number("ACQ:POIN?"));
@@ -130,13 +130,13 @@ fn blocks_look_like_those_of_the_standard() {
 fn the_sample_rate_falls_as_the_window_grows() {
     let mut fixture = Fixture::new(8, None);
     let mut rates = vec![];
-    for scale in ["1US", "100US", "200US", "1MS", "10MS"] {
+    for scale in ["1US", "100US", "200US", "1MS", "5MS"] {
         fixture.tell(&format!("ACQ:POIN 1E6;:TIM:SCAL {scale}"));
         rates.push(fixture.number("ACQ:SRAT?"));
     }
-    assert_eq!(rates, [1e9, 1e9, 500e6, 100e6, 10e6]);
+    assert_eq!(rates, [1e9, 1e9, 500e6, 100e6, 20e6]);
     fixture.tell("ACQ:POIN 10000");
-    assert_eq!(fixture.number("ACQ:SRAT?"), 100e3);
+    assert_eq!(fixture.number("ACQ:SRAT?"), 200e3);
 }
 
 #[test]
