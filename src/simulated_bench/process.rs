@@ -2,7 +2,7 @@
 //! standard output; it ends with its standard input.
 
 use crate::{
-    boards,
+    boards::{self, ClampKind, ControllerKind, Nominal},
     faults::{Fault, FaultPlan, InstrumentName},
     instruments::{
         Device, Instrument, SharedBench,
@@ -130,6 +130,27 @@ impl Drop for RunningBench {
     fn drop(&mut self) {
         self.bench.now().truth().final_state();
     }
+}
+
+/// Every board by name, with a sentence about it.
+pub fn boards() -> Vec<(&'static str, String)> {
+    boards::all().iter().map(|board| (board.name, sentence(&board.nominal))).collect()
+}
+
+fn sentence(nominal: &Nominal) -> String {
+    let [lowest_v, highest_v] = nominal.line_range_v;
+    let clamp = match nominal.clamp {
+        ClampKind::ResistorCapacitorDiode => "a resistor-capacitor-diode clamp",
+        ClampKind::Zener => "a zener clamp",
+    };
+    let controller = match nominal.controller {
+        ControllerKind::CycleSkipping => "leaves out cycles at light load",
+        ControllerKind::FrequencyFoldback => "lowers its frequency at light load",
+    };
+    format!(
+        "{} V, {} A from {lowest_v} V to {highest_v} V; has {clamp} and {controller}.",
+        nominal.output_v, nominal.maximum_load_a
+    )
 }
 
 fn positive(what: &'static str, value: f64) -> Result<f64, BenchError> {

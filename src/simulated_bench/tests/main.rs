@@ -5,8 +5,12 @@
 #[path = "../../../tests/need.rs"]
 mod need;
 
+mod boards;
 mod client;
+mod converter;
+mod front_end;
 mod instruments;
+mod ngspice;
 mod process;
 mod pyvisa;
 mod scope;
