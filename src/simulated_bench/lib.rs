@@ -3,3 +3,8 @@
 
 pub mod boards;
 pub mod converter;
+pub mod faults;
+pub mod instruments;
+pub mod process;
+pub mod truth;
+pub mod wires;

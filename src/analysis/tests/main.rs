@@ -3,3 +3,8 @@
 
 #[path = "../../../tests/need.rs"]
 mod need;
+
+mod circuit;
+mod recording_flyback;
+mod quantity;
+mod waveform;
