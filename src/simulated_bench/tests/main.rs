@@ -10,6 +10,7 @@ mod client;
 mod converter;
 mod instruments;
 mod ngspice;
+mod plant;
 mod process;
 mod pyvisa;
 mod scope;
