@@ -19,3 +19,4 @@ mod boards;
 mod converter;
 mod ngspice;
 mod trace;
+mod plant;
