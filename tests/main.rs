@@ -4,3 +4,5 @@
 mod files;
 mod instruments;
 mod need;
+mod scpi;
+mod transport;

@@ -42,12 +42,11 @@ pub(super) struct Request {
 
 /// Silence after which nothing more of an old answer is expected to be under way.
 const QUIET: Duration = Duration::from_millis(50);
-/// The same where the marker's answer can't be told from an older one.
-const LONG_QUIET: Duration = Duration::from_millis(300);
 const FIRST_PAUSE: Duration = Duration::from_millis(20);
 const LONGEST_PAUSE: Duration = Duration::from_secs(1);
 const IDENTITY: &str = "*IDN?";
-const COMPLETION: &str = "*OPC?";
+/// Values of the event enable register that serve as markers: odd ones, large enough to be no usual answer.
+const MARKS: std::ops::Range<u8> = 64..127;
 
 pub(super) struct Owner {
     link: Option<Box<dyn Link>>,
@@ -59,6 +58,8 @@ pub(super) struct Owner {
     outstanding: Vec<String>,
     out_of_step: bool,
     identity: Option<String>,
+    /// The last marker that was written.
+    marks: u8,
 }
 
 impl Owner {
@@ -69,7 +70,17 @@ impl Owner {
         log: ExchangeLog,
     ) -> Self {
         let (buffer, outstanding) = (Vec::new(), Vec::new());
-        Self { link: Some(link), opener, options, log, buffer, outstanding, out_of_step: false, identity: None }
+        Self {
+            link: Some(link),
+            opener,
+            options,
+            log,
+            buffer,
+            outstanding,
+            out_of_step: false,
+            identity: None,
+            marks: MARKS.start,
+        }
     }
 
     pub(super) async fn run(mut self, mut requests: mpsc::Receiver<Request>, abandon: Arc<Notify>) {
@@ -253,46 +264,62 @@ impl Owner {
     }
 
     /// Waits for quiet, then asks a marker and drops everything before its answer. Instruments answer in order: what comes
-    /// after the marker's answer is new.
+    /// after the marker's answer is new. The marker is the identity, unless an answer to that very question may still be
+    /// under way; then it is a value that was never asked for before, written into the event enable register, which
+    /// nothing here uses otherwise.
     async fn resynchronise(&mut self, deadline: Instant) -> Result<(), Failure> {
-        self.drop_until_quiet(QUIET, deadline).await?;
-        let waiting = |marker: &str| self.outstanding.iter().filter(|asked| asked.as_str() == marker).count();
-        let marker = if waiting(IDENTITY) > waiting(COMPLETION) { COMPLETION } else { IDENTITY };
-        let older = waiting(marker);
+        self.drop_until_quiet(deadline).await?;
+        let numbered = self.outstanding.iter().any(|asked| asked == IDENTITY);
+        let mark = numbered.then(|| self.next_mark());
+        let marker = match mark {
+            Some(mark) => {
+                self.send(&format!("*ESE {mark}"), deadline).await?;
+                "*ESE?"
+            }
+            None => IDENTITY,
+        };
         self.outstanding.push(marker.to_owned());
         self.send(marker, deadline).await?;
         loop {
             match self.read_line(deadline).await {
-                Ok(line) if self.answers(marker, &line) => break,
+                Ok(line) if self.answers(mark, &line) => break,
                 Ok(_) => {}
                 Err(failure) if failure.kind == ScpiErrorKind::Garbled => self.buffer.clear(),
                 Err(failure) => return Err(failure),
             }
         }
-        // An older question of the same wording can't be told from the marker: its answer may have been this one.
-        self.drop_until_quiet(if older > 0 { LONG_QUIET } else { Duration::ZERO }, deadline).await?;
+        if numbered {
+            self.send("*ESE 0", deadline).await?;
+        }
         self.note("in step again");
         Ok(())
     }
 
-    fn answers(&self, marker: &str, line: &str) -> bool {
-        match (marker, &self.identity) {
-            (COMPLETION, _) => integer(line) == Ok(1),
-            (_, Some(identity)) => line == identity,
-            (_, None) => line.matches(',').count() >= 3,
+    fn next_mark(&mut self) -> i64 {
+        self.marks = if MARKS.contains(&(self.marks + 1)) { self.marks + 1 } else { MARKS.start };
+        2 * i64::from(self.marks) + 1
+    }
+
+    fn answers(&self, mark: Option<i64>, line: &str) -> bool {
+        match (mark, &self.identity) {
+            (Some(mark), _) => integer(line) == Ok(mark),
+            (None, Some(identity)) => line == identity,
+            (None, None) => line.matches(',').count() >= 3,
         }
     }
 
-    async fn drop_until_quiet(&mut self, quiet: Duration, deadline: Instant) -> Result<(), Failure> {
-        let mut dropped = std::mem::take(&mut self.buffer).len();
-        while !quiet.is_zero() {
-            match self.receive((Instant::now() + quiet).min(deadline)).await {
+    async fn drop_until_quiet(&mut self, deadline: Instant) -> Result<(), Failure> {
+        let mut dropped = 0;
+        loop {
+            dropped += std::mem::take(&mut self.buffer).len();
+            let quiet = Instant::now() + QUIET;
+            if quiet > deadline {
+                return Err(Failure::new(ScpiErrorKind::OutOfStep));
+            }
+            match self.receive(quiet).await {
+                Ok(_) => {}
                 Err(failure) if failure.kind == ScpiErrorKind::NoAnswer => break,
                 Err(failure) => return Err(failure),
-                Ok(_) => dropped += std::mem::take(&mut self.buffer).len(),
-            }
-            if Instant::now() >= deadline {
-                return Err(Failure::new(ScpiErrorKind::OutOfStep));
             }
         }
         if dropped > 0 {
@@ -327,7 +354,7 @@ impl Owner {
             source: Some(error),
         })?);
         // On a serial line the rest of an old answer may still be coming.
-        self.drop_until_quiet(QUIET, attempt).await?;
+        self.drop_until_quiet(attempt).await?;
         self.send(IDENTITY, attempt).await?;
         let line = self.read_line(attempt).await?;
         match &self.identity {
