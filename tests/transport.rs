@@ -88,6 +88,17 @@ async fn a_kind_that_this_build_does_not_reach_is_refused_by_name() {
     assert!(error.to_string().contains("HiSLIP"), "{error}");
 }
 
+/// No VISA library is installed where the tests run.
+#[cfg(feature = "visa")]
+#[tokio::test]
+async fn a_missing_visa_library_is_an_error_and_no_panic() {
+    for address in ["GPIB0::7::INSTR", "TCPIP::host::hislip0::INSTR"] {
+        let error = port(address).open(soon()).await.err().unwrap();
+        assert_eq!(error.kind, LinkErrorKind::NotSupported);
+        assert!(error.to_string().contains("VISA library"), "{error}");
+    }
+}
+
 #[tokio::test]
 async fn a_socket_carries_bytes_both_ways_and_tells_when_it_is_closed() {
     let listener = TcpListener::bind("127.0.0.1:0").await.unwrap();
