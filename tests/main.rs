@@ -2,6 +2,8 @@
 #![allow(clippy::unwrap_used, missing_docs)]
 
 mod cli;
+mod by_hand;
+mod drivers;
 mod files;
 mod instruments;
 mod invented;
@@ -10,3 +12,6 @@ mod need;
 mod preflight;
 mod record;
 mod report;
+mod safe_off;
+mod scpi;
+mod transport;
