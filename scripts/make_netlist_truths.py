@@ -9,6 +9,7 @@ import re
 
 import numpy as np
 import scipy.linalg
+import scipy.optimize
 
 FOLDER = pathlib.Path(__file__).resolve().parent.parent / "tests" / "netlists"
 SUFFIX = {"meg": 1e6, "m": 1e-3, "u": 1e-6, "n": 1e-9, "p": 1e-12, "f": 1e-15, "k": 1e3, "": 1.0}
@@ -82,8 +83,8 @@ def linearised(netlist, plateau):
     return resistors, capacitors, inductors
 
 
-def poles(netlist, plateau):
-    """Natural frequencies (rad/s, upper half-plane) of the linearised circuit."""
+def matrices(netlist, plateau):
+    """Conductance and storage matrices of the linearised circuit, and the row of the drain node."""
     resistors, capacitors, inductors = linearised(netlist, plateau)
     # Nodes that a source holds do not move; a fully coupled secondary winding is a ratio, not an inductor.
     held = {"0", "bulk", "top", "return", "stiff", "gate"} | {"clamp"}
@@ -113,8 +114,21 @@ def poles(netlist, plateau):
         g[:size, size + k] += difference
         g[size + k, :size] -= difference
         c[size + k, size + k] = henries
+    return g, c, index["drain"]
+
+
+def poles(netlist, plateau):
+    """Natural frequencies (rad/s, upper half-plane) of the linearised circuit."""
+    g, c, _ = matrices(netlist, plateau)
     found = scipy.linalg.eig(-g, c, right=False)
     return [s for s in found if np.isfinite(s) and s.imag > 1e5 and s.real < 0]
+
+
+def resonance_hz(netlist, plateau, near_hz):
+    """Frequency at which the impedance of the drain node is real: what a small-signal analysis shows without a fit."""
+    g, c, drain = matrices(netlist, plateau)
+    impedance = lambda hz: np.linalg.inv(g + 2j * math.pi * hz * c)[drain, drain].imag
+    return scipy.optimize.brentq(impedance, 0.97 * near_hz, 1.03 * near_hz)
 
 
 def ring(netlist, plateau):
@@ -129,6 +143,7 @@ def ring(netlist, plateau):
         "damped_frequency_hz": s.imag / (2 * math.pi),
         "decay_per_s": -s.real,
         "quality_factor": abs(s) / (2 * -s.real),
+        "resonance_hz": resonance_hz(netlist, plateau, abs(s) / (2 * math.pi)),
     }
 
 

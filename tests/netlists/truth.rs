@@ -35,6 +35,8 @@ pub(super) struct TrueRing {
     pub(super) damped_frequency_hz: f64,
     pub(super) decay_per_s: f64,
     pub(super) quality_factor: f64,
+    /// Where the impedance of the drain node is real: within 0.1 % of the undamped frequency.
+    pub(super) resonance_hz: f64,
     pub(super) node_capacitance_f: f64,
 }
 
