@@ -4,17 +4,33 @@
 use super::truth::netlist;
 use std::{fs, path::Path, process::Command};
 
-/// Time (s), drain voltage (V) at every step of the simulator.
+/// Time (s), drain voltage (V) and secondary current (A) at every step of the simulator.
 pub(super) struct Simulated {
     pub(super) time_s: Vec<f64>,
     pub(super) drain_v: Vec<f64>,
+    secondary_a: Vec<f64>,
+}
+
+impl Simulated {
+    /// When the secondary current dies between two times: where it first reaches zero after it was last above a twentieth
+    /// of its peak, which no current into the rectifier's capacitance reaches later.
+    pub(super) fn end_of_demagnetisation_s(&self, from_s: f64, to_s: f64) -> Option<f64> {
+        let [from, to] = [from_s, to_s].map(|t| self.time_s.partition_point(|&at| at < t));
+        let current = &self.secondary_a[from..to];
+        let peak = current.iter().copied().fold(0.0, f64::max);
+        let last = current.iter().rposition(|&a| a > peak / 20.0)?;
+        let dead = current[last..].iter().position(|&a| a <= 0.0)?;
+        Some(self.time_s[from + last + dead])
+    }
 }
 
 /// The switching waveform of a board.
 pub(super) fn simulate(board: &str) -> Simulated {
     let rows = run(&fs::read_to_string(netlist(board)).unwrap(), "waveform.txt");
     let column = |k: usize| rows.iter().map(|row| row[k]).collect();
-    Simulated { time_s: column(0), drain_v: column(1) }
+    // The ammeter counts from the winding into the return: against the rectifier's direction.
+    let secondary_a = rows.iter().map(|row| -row[3]).collect();
+    Simulated { time_s: column(0), drain_v: column(1), secondary_a }
 }
 
 /// Frequency at which the drain node's impedance is real, near the expected one.

@@ -1,7 +1,10 @@
 //! A recording of a netlist's drain as an 8-bit scope would give it: even grid, noise, codes; and its stored form, `.npy`
 //! with the scale in a JSON sidecar.
 
-use super::{simulation::Simulated, truth::Truth};
+use super::{
+    simulation::Simulated,
+    truth::{TrueCycle, Truth},
+};
 use rand_chacha::{
     ChaCha8Rng,
     rand_core::{Rng, SeedableRng},
@@ -12,20 +15,21 @@ use std::{fs, path::PathBuf};
 /// Standard deviation of the noise before rounding, in codes.
 const NOISE_CODES: f64 = 0.5;
 
-/// Codes with their scale: volts = scale x code + offset.
+/// Codes with their scale, volts = scale x code + offset, and what only the simulator saw.
 pub(super) struct Recording {
     pub(super) codes: Vec<u8>,
     pub(super) scale: Scale,
 }
 
-/// Scale of a recording.
-#[derive(Clone, Copy, Serialize, Deserialize)]
+/// Scale of a recording, and the end of demagnetisation of each cycle of the truth.
+#[derive(Clone, Serialize, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub(super) struct Scale {
     pub(super) interval_s: f64,
     pub(super) start_s: f64,
     pub(super) scale_v: f64,
     pub(super) offset_v: f64,
+    pub(super) ends_of_demagnetisation_s: Vec<Option<f64>>,
 }
 
 impl Recording {
@@ -40,8 +44,19 @@ impl Recording {
             let wanted = (v - offset_v) / scale_v + NOISE_CODES * normal(&mut generator);
             wanted.round().clamp(0.0, 255.0) as u8
         };
-        let scale = Scale { interval_s, start_s: truth.record_start_s, scale_v, offset_v };
-        Self { codes: even.iter().map(code).collect(), scale }
+        let codes = even.iter().map(code).collect();
+        let dies = |cycle: &TrueCycle| match cycle.mode.as_str() {
+            "continuous" => None,
+            _ => simulated.end_of_demagnetisation_s(cycle.turn_off_s, cycle.end_s),
+        };
+        let ends_of_demagnetisation_s = truth.cycles.iter().map(dies).collect();
+        let start_s = truth.record_start_s;
+        Self { codes, scale: Scale { interval_s, start_s, scale_v, offset_v, ends_of_demagnetisation_s } }
+    }
+
+    /// Voltages.
+    pub(super) fn volts(&self) -> Vec<f64> {
+        self.codes.iter().map(|&code| self.scale.scale_v * f64::from(code) + self.scale.offset_v).collect()
     }
 
     /// The stored recording of a board.
