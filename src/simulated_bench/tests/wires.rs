@@ -1,0 +1,1 @@
+//! The oscilloscope: settings, trigger, clipping, sample rate, what a record holds.
