@@ -9,6 +9,7 @@ mod instruments;
 mod invented;
 mod layering;
 mod need;
+mod netlists;
 mod preflight;
 mod record;
 mod report;
