@@ -1,8 +1,8 @@
 //! Integration tests: one module a subject.
 #![allow(clippy::unwrap_used, missing_docs)]
 
-mod cli;
 mod by_hand;
+mod cli;
 mod drivers;
 mod files;
 mod instruments;

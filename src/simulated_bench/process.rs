@@ -116,6 +116,10 @@ pub struct Announcement {
     pub probe_factor: f64,
     /// Nominal capacitance of the drain probe; the real one is within 3 %.
     pub probe_capacitance_f: f64,
+    /// What the documents of the board state.
+    pub documents: Nominal,
+    /// Primary self-inductance of this very sample as an inductance meter shows it, within 0.5 %.
+    pub primary_inductance_reading_h: f64,
 }
 
 /// A started bench; it ends when this is dropped.
@@ -174,6 +178,14 @@ fn probe(options: &Options) -> Result<Probe, BenchError> {
     })
 }
 
+/// Primary self-inductance of the sample through a meter that is off by up to 0.5 %.
+fn inductance_reading(bench: &SharedBench, seed: u64) -> f64 {
+    let bench = bench.now();
+    let circuit = bench.plant().circuit();
+    let primary_h = circuit.parts.magnetising_h + circuit.parts.leakage_h;
+    primary_h * (1.0 + 0.005 * quirk(seed, "inductance meter", 0))
+}
+
 /// Starts a bench within this process.
 ///
 /// # Errors
@@ -208,6 +220,8 @@ pub async fn start(options: &Options) -> Result<RunningBench, BenchError> {
         source: source.address().map_err(failed("name the source's socket"))?,
         probe_factor: options.probe_factor,
         probe_capacitance_f: options.probe_capacitance_f,
+        documents: board.nominal,
+        primary_inductance_reading_h: inductance_reading(&bench, seed),
     };
     bench.now().note_state();
     let mut tasks = JoinSet::new();
