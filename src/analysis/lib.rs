@@ -5,5 +5,9 @@
 //! [`circuit`] (capacitance and leakage). [`findings`] holds the results as plain data and [`analyse`] is the one entry.
 //! No clock, file, socket or thread is used here.
 
+pub mod circuit;
+pub mod cycles;
 pub mod findings;
+pub mod fit;
 pub mod quantity;
+pub mod waveform;

@@ -3,3 +3,8 @@
 
 #[path = "../../../tests/need.rs"]
 mod need;
+
+mod circuit;
+mod quantity;
+mod recording_flyback;
+mod waveform;

@@ -1,0 +1,69 @@
+//! A ring found in samples: one damped sinusoid with offset and slope, its covariance, and the refusal of anything else.
+
+mod ring;
+
+pub use ring::{combine, ring_of};
+
+use crate::findings::{Doubt, DoubtName, Ring, RingFit, RingKind};
+
+/// When the samples were taken.
+#[derive(Debug, Clone, Copy)]
+pub enum Times<'a> {
+    /// Evenly.
+    Even {
+        /// Time of the first sample in seconds.
+        start_s: f64,
+        /// Sample interval in seconds.
+        interval_s: f64,
+    },
+    /// Time of each sample in seconds, ascending, as many as there are samples.
+    Uneven(&'a [f64]),
+}
+
+/// The samples of one ring: from where it rings freely to where it is cut.
+#[derive(Debug, Clone, Copy)]
+pub struct RingRecord<'a> {
+    /// When the samples were taken.
+    pub times_s: Times<'a>,
+    /// Samples in volts.
+    pub volts: &'a [f64],
+    /// Vertical step of the converter in volts, where known.
+    pub step_v: Option<f64>,
+    /// Lowest and highest voltage that the vertical range could show, where known.
+    pub clip_v: Option<(f64, f64)>,
+}
+
+/// Why no ring was accepted.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Refusal {
+    /// What was seen, and what to change on the bench.
+    pub doubt: Doubt,
+    /// The fit that was tried and found wanting, where there is one.
+    pub rejected: Option<Box<RingFit>>,
+}
+
+/// A ring that was accepted.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Accepted {
+    /// The fit: one damped sinusoid, for drawing and for residuals.
+    pub fit: RingFit,
+    /// The ring at small signal. Where the frequency depends on amplitude this is not [`ring_of`] the fit.
+    pub ring: Ring,
+    /// Reasons to trust it less, such as an amplitude-dependent frequency.
+    pub doubts: Vec<Doubt>,
+}
+
+/// Fits the ring in the record.
+///
+/// # Errors
+/// A typed refusal where the record holds no valid single ring.
+pub fn fit_ring(_record: &RingRecord<'_>, _kind: RingKind) -> Result<Accepted, Refusal> {
+    let sentence = "the fit is not built yet".to_owned();
+    Err(Refusal { doubt: Doubt { name: DoubtName::NoRing, sentence }, rejected: None })
+}
+
+/// Index of the first sample of the free ring in a bare ring-down that may begin before the event, and one past the last sample
+/// before the ring sinks in noise. `None` where nothing rings.
+pub fn find_ring_down(_record: &RingRecord<'_>) -> Option<std::ops::Range<usize>> {
+    None
+}
