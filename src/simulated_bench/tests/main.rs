@@ -11,6 +11,7 @@ mod converter;
 mod front_end;
 mod instruments;
 mod ngspice;
+mod plant;
 mod process;
 mod pyvisa;
 mod scope;
