@@ -66,7 +66,7 @@ impl Plant {
         Self {
             board,
             seed,
-            circuit: Circuit { parts, probe_f: 0.0 },
+            circuit: Circuit::new(parts, 0.0),
             control: board.controller,
             line: Line { peak_v: None, frequency_hz: 50.0, phase: 0.0, limit_a: 0.0 },
             load: LoadDemand::Off,
