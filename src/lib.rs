@@ -8,6 +8,8 @@
 
 pub mod files;
 pub mod instrument;
+pub mod record;
+pub mod report;
 pub mod scpi;
 pub mod sequence;
 pub mod station;

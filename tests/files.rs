@@ -129,6 +129,9 @@ fn another_kind_of_file_and_a_newer_version_are_the_only_mistake_reported() {
     let errors = board_errors(&with(BOARD, "ringstep board 1", "ringstep board 2").replace("turns_ratio", "turns"));
     assert_eq!(errors.errors.len(), 1, "{errors}");
     assert_eq!(errors.errors[0].help.as_deref(), Some("the file was written for a newer version of this program"));
+    let errors = board_errors(&with(BOARD, "format = \"ringstep board 1\"", ""));
+    assert_eq!((errors.errors.len(), errors.errors[0].mistake), (1, Mistake::Missing), "{errors}");
+    assert_eq!(errors.errors[0].help.as_deref(), Some("format = \"ringstep board 1\""));
 }
 
 #[test]

@@ -3,7 +3,8 @@
 use crate::files::{Document, FileErrors, Table, Value};
 use ringstep_analysis::quantity::Unit;
 
-/// A plan.
+/// A plan. Its file looks like this:
+#[doc = concat!("```toml\n", include_str!("../guide/examples/plan.toml"), "```")]
 #[derive(Debug, Clone, PartialEq)]
 pub struct Plan {
     /// Name.

@@ -1,10 +1,20 @@
 //! A ring found in samples: one damped sinusoid with offset and slope, its covariance, and the refusal of anything else.
 
+mod clipping;
+mod model;
+mod noise;
+mod report;
 mod ring;
+mod series;
+mod solve;
+mod start;
+mod verdict;
+mod window;
 
-pub use ring::{combine, ring_of};
+pub use ring::{combine, ring_of, weighted_mean};
+pub use window::find_ring_down;
 
-use crate::findings::{Doubt, DoubtName, Ring, RingFit, RingKind};
+use crate::findings::{Doubt, Ring, RingFit, RingKind};
 
 /// When the samples were taken.
 #[derive(Debug, Clone, Copy)]
@@ -33,6 +43,19 @@ pub struct RingRecord<'a> {
     pub clip_v: Option<(f64, f64)>,
 }
 
+impl<'a> RingRecord<'a> {
+    /// The same record from one sample to another, the second not included.
+    pub fn part(&self, range: std::ops::Range<usize>) -> RingRecord<'a> {
+        let times_s = match self.times_s {
+            Times::Even { start_s, interval_s } => {
+                Times::Even { start_s: start_s + range.start as f64 * interval_s, interval_s }
+            }
+            Times::Uneven(times) => Times::Uneven(&times[range.clone()]),
+        };
+        RingRecord { times_s, volts: &self.volts[range], ..*self }
+    }
+}
+
 /// Why no ring was accepted.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Refusal {
@@ -57,13 +80,6 @@ pub struct Accepted {
 ///
 /// # Errors
 /// A typed refusal where the record holds no valid single ring.
-pub fn fit_ring(_record: &RingRecord<'_>, _kind: RingKind) -> Result<Accepted, Refusal> {
-    let sentence = "the fit is not built yet".to_owned();
-    Err(Refusal { doubt: Doubt { name: DoubtName::NoRing, sentence }, rejected: None })
-}
-
-/// Index of the first sample of the free ring in a bare ring-down that may begin before the event, and one past the last sample
-/// before the ring sinks in noise. `None` where nothing rings.
-pub fn find_ring_down(_record: &RingRecord<'_>) -> Option<std::ops::Range<usize>> {
-    None
+pub fn fit_ring(record: &RingRecord<'_>, kind: RingKind) -> Result<Accepted, Refusal> {
+    verdict::judge(record, kind)
 }

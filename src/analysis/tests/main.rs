@@ -1,10 +1,12 @@
 //! Integration tests: one module a subject.
-#![allow(clippy::unwrap_used, missing_docs)]
+#![allow(clippy::unwrap_used, missing_docs, unreachable_pub)]
 
 #[path = "../../../tests/need.rs"]
 mod need;
 
+mod acceptance;
 mod circuit;
-mod recording_flyback;
+mod generate;
 mod quantity;
+mod recording_flyback;
 mod waveform;

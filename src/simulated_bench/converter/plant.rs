@@ -177,7 +177,10 @@ impl Plant {
             Activity::Running(since_s) => since_s > self.control.soft_start_s,
             Activity::Waiting | Activity::Pausing(_) => false,
         };
+        // A board about to shut down, or a source that limits, may pass by the orbit without staying there.
+        let passing = self.pauses >= 2 || self.slow.controller.overloaded_s > 0.0 || self.line_limiting();
         soft_started
+            && !passing
             && self.settled_orbit().is_some_and(|orbit| {
                 let settled = orbit.at(self.line.phase);
                 (settled.bulk_v - self.slow.bulk_v).abs() < 0.5

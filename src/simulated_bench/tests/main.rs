@@ -8,6 +8,7 @@ mod need;
 mod boards;
 mod client;
 mod converter;
+mod front_end;
 mod instruments;
 mod ngspice;
 mod plant;
