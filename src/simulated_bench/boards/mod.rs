@@ -1,10 +1,11 @@
 //! The boards that ship with the bench, invented for the Norrsund Harbour Works. Fixed: a board is never softened to suit a
 //! measurement.
 
-mod harbour;
 mod parts;
+mod ringing;
+mod short;
+mod silent;
 
-pub use harbour::{all, by_name};
 pub use parts::{Clamp, ClampLevel, ControllerParts, Diode, LightLoad, Parts};
 use serde::Serialize;
 
@@ -72,4 +73,17 @@ pub struct BoardModel {
     pub parts: Parts,
     /// Controller.
     pub controller: ControllerParts,
+}
+
+static BOARDS: [BoardModel; 6] =
+    [ringing::BEACON, ringing::FOGHORN, ringing::TIDEGAUGE, ringing::WINCH, silent::PUMPHOUSE, silent::SEMAPHORE];
+
+/// Every board.
+pub fn all() -> &'static [BoardModel] {
+    &BOARDS
+}
+
+/// The board of that name.
+pub fn by_name(name: &str) -> Option<&'static BoardModel> {
+    BOARDS.iter().find(|board| board.name == name)
 }

@@ -107,16 +107,70 @@ pub struct Circuit {
     pub parts: Parts,
     /// Probe.
     pub probe_f: f64,
+    per: Reciprocals,
+}
+
+/// What every step would divide by.
+#[derive(Debug, Clone, Copy, PartialEq)]
+struct Reciprocals {
+    leakage_h: f64,
+    magnetising_h: f64,
+    core_ohm: f64,
+    turns: f64,
+    output_f: f64,
+    bulk_f: f64,
+    line_ohm: f64,
+    clamp_ohm: f64,
+    clamp_f: f64,
+    bleed_ohm: f64,
+    clamp_storage_s: f64,
+    rectifier_storage_s: f64,
+    /// Conductance past the leakage inductance.
+    bypass_s: f64,
+    /// Share of that conductance's current that is left with the transistor on.
+    on: f64,
+}
+
+impl Reciprocals {
+    fn new(p: &Parts) -> Self {
+        let (clamp_f, bleed_ohm) = match p.clamp.level {
+            ClampLevel::Capacitor { farad, bleed_ohm } => (1.0 / farad, 1.0 / bleed_ohm),
+            // A zener's level does not move.
+            ClampLevel::Zener { .. } => (0.0, 0.0),
+        };
+        let bypass_s = 1.0 / (p.leakage_loss_ohm + p.winding_ohm);
+        Self {
+            leakage_h: 1.0 / p.leakage_h,
+            magnetising_h: 1.0 / p.magnetising_h,
+            core_ohm: 1.0 / p.core_ohm,
+            turns: 1.0 / p.turns_ratio,
+            output_f: 1.0 / p.output_f,
+            bulk_f: 1.0 / p.bulk_f,
+            line_ohm: 1.0 / p.line_ohm,
+            clamp_ohm: 1.0 / p.clamp.diode.series_ohm,
+            clamp_f,
+            bleed_ohm,
+            clamp_storage_s: 1.0 / p.clamp.diode.storage_s,
+            rectifier_storage_s: 1.0 / p.rectifier.storage_s,
+            bypass_s,
+            on: 1.0 / (1.0 + p.on_ohm * bypass_s),
+        }
+    }
 }
 
 impl Circuit {
+    /// The circuit of these parts with that probe.
+    pub fn new(parts: Parts, probe_f: f64) -> Self {
+        Self { parts, probe_f, per: Reciprocals::new(&parts) }
+    }
+
     /// Loss current of the core; its conductance grows with amplitude as hysteresis makes it.
     #[inline(always)]
     pub fn core_a(&self, winding_v: f64) -> f64 {
         let p = &self.parts;
         let square = winding_v * winding_v;
         let growth = p.core_growth * square / (square + p.core_growth_v * p.core_growth_v);
-        winding_v / p.core_ohm * (1.0 + growth)
+        winding_v * self.per.core_ohm * (1.0 + growth)
     }
 
     /// Capacitance from the drain to everything that stands still, at the given drain voltage and clamp node voltage.
@@ -132,9 +186,9 @@ impl Circuit {
     /// Capacitance across the secondary, reflected to the primary.
     #[inline(always)]
     pub fn reflected_f(&self, winding_v: f64, output_v: f64) -> f64 {
-        let p = &self.parts;
-        let reverse_v = output_v + winding_v / p.turns_ratio;
-        (p.rectifier.junction.capacitance_f(reverse_v) + p.secondary_f) / (p.turns_ratio * p.turns_ratio)
+        let (p, per_n) = (&self.parts, self.per.turns);
+        let reverse_v = output_v + winding_v * per_n;
+        (p.rectifier.junction.capacitance_f(reverse_v) + p.secondary_f) * (per_n * per_n)
     }
 
     /// Winding voltage (positive) at which the rectifier starts to conduct.
@@ -147,11 +201,11 @@ impl Circuit {
     #[inline(always)]
     pub fn branches(&self, time_s: f64, s: &State, on: &Conduction) -> Branches {
         let p = &self.parts;
-        let admittance = 1.0 / (p.leakage_loss_ohm + p.winding_ohm);
+        let admittance = self.per.bypass_s;
         let resistive = s.leakage_a * (1.0 - p.winding_ohm * admittance);
         // The primary current is `held - slope * winding_v` in every mode.
         let (held, slope) = if on.channel == Channel::On {
-            let share = 1.0 / (1.0 + p.on_ohm * admittance);
+            let share = self.per.on;
             ((resistive + s.bulk_v * admittance) * share, admittance * share)
         } else {
             (resistive + (s.bulk_v - s.drain_v) * admittance, admittance)
@@ -166,7 +220,7 @@ impl Circuit {
         let primary_a = held - slope * winding_v;
         let drain_v = if on.channel == Channel::On { p.on_ohm * primary_a } else { s.drain_v };
         let diode = &p.clamp.diode;
-        let clamp_a = if on.clamp { (drain_v - s.bulk_v - s.clamp_v - diode.drop_v) / diode.series_ohm } else { 0.0 };
+        let clamp_a = if on.clamp { (drain_v - s.bulk_v - s.clamp_v - diode.drop_v) * self.per.clamp_ohm } else { 0.0 };
         let rectifier_a = if on.rectifier { s.magnetising_a + self.core_a(winding_v) - primary_a } else { 0.0 };
         let channel_a = match on.channel {
             Channel::Off | Channel::On => 0.0,
@@ -182,9 +236,8 @@ impl Circuit {
         let p = &self.parts;
         let b = self.branches(time_s, s, on);
         let drain_free = !on.body && on.channel != Channel::On;
-        let leakage_v = (s.bulk_v - b.drain_v - b.winding_v - p.winding_ohm * s.leakage_a)
-            / (1.0 + p.winding_ohm / p.leakage_loss_ohm);
-        let clamp_diode = &p.clamp.diode;
+        let series_v = s.bulk_v - b.drain_v - b.winding_v - p.winding_ohm * s.leakage_a;
+        let leakage_v = series_v * p.leakage_loss_ohm * self.per.bypass_s;
         State {
             drain_v: if drain_free {
                 (b.primary_a - b.channel_a - b.clamp_a) / self.drain_f(s.drain_v, s.bulk_v + s.clamp_v)
@@ -196,23 +249,20 @@ impl Circuit {
             } else {
                 (b.primary_a - s.magnetising_a - self.core_a(b.winding_v)) / self.reflected_f(b.winding_v, s.output_v)
             },
-            leakage_a: leakage_v / p.leakage_h,
-            magnetising_a: b.winding_v / p.magnetising_h,
-            clamp_v: match p.clamp.level {
-                ClampLevel::Capacitor { farad, bleed_ohm } => (b.clamp_a - s.clamp_v / bleed_ohm) / farad,
-                ClampLevel::Zener { .. } => 0.0,
-            },
-            clamp_c: if on.clamp { b.clamp_a - s.clamp_c / clamp_diode.storage_s } else { 0.0 },
-            rectifier_c: if on.rectifier { b.rectifier_a - s.rectifier_c / p.rectifier.storage_s } else { 0.0 },
-            output_v: (p.turns_ratio * b.rectifier_a - drive.output_a(s.output_v)) / p.output_f,
-            bulk_v: (self.line_a(s.bulk_v, drive) - b.primary_a + b.clamp_a) / p.bulk_f,
+            leakage_a: leakage_v * self.per.leakage_h,
+            magnetising_a: b.winding_v * self.per.magnetising_h,
+            clamp_v: (b.clamp_a - s.clamp_v * self.per.bleed_ohm) * self.per.clamp_f,
+            clamp_c: if on.clamp { b.clamp_a - s.clamp_c * self.per.clamp_storage_s } else { 0.0 },
+            rectifier_c: if on.rectifier { b.rectifier_a - s.rectifier_c * self.per.rectifier_storage_s } else { 0.0 },
+            output_v: (p.turns_ratio * b.rectifier_a - drive.output_a(s.output_v)) * self.per.output_f,
+            bulk_v: (self.line_a(s.bulk_v, drive) - b.primary_a + b.clamp_a) * self.per.bulk_f,
         }
     }
 
     /// Current from the line into the bulk capacitor.
     #[inline(always)]
     pub fn line_a(&self, bulk_v: f64, drive: &Drive) -> f64 {
-        drive.line_v.map_or(0.0, |line_v| ((line_v - bulk_v) / self.parts.line_ohm).clamp(0.0, drive.line_limit_a))
+        drive.line_v.map_or(0.0, |line_v| ((line_v - bulk_v) * self.per.line_ohm).clamp(0.0, drive.line_limit_a))
     }
 
     /// One Runge-Kutta step of fourth order; algebraic voltages are written back into the state.
@@ -226,11 +276,6 @@ impl Circuit {
         let b = self.branches(time_s + h, &next, on);
         (next.drain_v, next.winding_v) = (b.drain_v, b.winding_v);
         next
-    }
-
-    /// Smallest reflected capacitance: the secondary fully reversed at `bulk_v`.
-    pub fn least_reflected_f(&self, bulk_v: f64, output_v: f64) -> f64 {
-        self.reflected_f(bulk_v, output_v)
     }
 
     /// Slow mode of the linearised network with nothing conducting: `(w0^2, 1/(w0^2 Lp))` at that bulk voltage.
@@ -259,6 +304,6 @@ impl Drive {
     #[inline(always)]
     pub fn output_a(&self, output_v: f64) -> f64 {
         // A constant-current load cannot draw from a discharged output.
-        self.load_a * (output_v / 0.5).clamp(0.0, 1.0) + self.load_s * output_v
+        self.load_a * (2.0 * output_v).clamp(0.0, 1.0) + self.load_s * output_v
     }
 }

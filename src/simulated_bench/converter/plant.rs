@@ -66,7 +66,7 @@ impl Plant {
         Self {
             board,
             seed,
-            circuit: Circuit { parts, probe_f: 0.0 },
+            circuit: Circuit::new(parts, 0.0),
             control: board.controller,
             line: Line { peak_v: None, frequency_hz: 50.0, phase: 0.0, limit_a: 0.0 },
             load: LoadDemand::Off,
@@ -177,13 +177,14 @@ impl Plant {
             Activity::Running(since_s) => since_s > self.control.soft_start_s,
             Activity::Waiting | Activity::Pausing(_) => false,
         };
-        // A board about to shut down, or a source that limits, may pass by the orbit without staying there.
-        let passing = self.pauses >= 2 || self.slow.controller.overloaded_s > 0.0 || self.line_limiting();
+        let shutting_down = self.pauses >= 2 || self.slow.controller.overloaded_s > 0.0;
         soft_started
-            && !passing
+            && !shutting_down
             && self.settled_orbit().is_some_and(|orbit| {
                 let settled = orbit.at(self.line.phase);
-                (settled.bulk_v - self.slow.bulk_v).abs() < 0.5
+                // A source that still limits an inrush may pass by the orbit without staying there.
+                self.line_limiting() == orbit.limiting
+                    && (settled.bulk_v - self.slow.bulk_v).abs() < 0.5
                     && (settled.output_v - self.slow.output_v).abs() < 5e-3
                     && (settled.clamp_v - self.slow.clamp_v).abs() < 2.0
             })

@@ -85,7 +85,8 @@ impl Stepper {
         drive: Drive,
         state: State,
     ) -> Self {
-        let reflected_f = circuit.least_reflected_f(state.bulk_v.max(1.0), control.reference_v);
+        // Smallest while the transistor conducts: the rectifier is reversed by bulk and output.
+        let reflected_f = circuit.reflected_f(state.bulk_v.max(1.0), control.reference_v);
         let fastest_s = (circuit.parts.leakage_h * reflected_f).sqrt();
         Self {
             circuit,

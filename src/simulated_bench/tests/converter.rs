@@ -5,7 +5,7 @@ use crate::trace::{Trace, board, capture, settled};
 use ringstep_simulated_bench::{
     boards,
     converter::{
-        Plant,
+        ConductionMode, Plant,
         circuit::{Channel, Circuit, Conduction, Drive, State},
         junction::CapacitanceLaw,
     },
@@ -69,7 +69,7 @@ fn bare_ring() -> Circuit {
     // Next to nothing across the secondary: both inductances are one.
     parts.secondary_f = 1e-15 * parts.turns_ratio.powi(2);
     parts.bulk_f = 1.0;
-    Circuit { parts, probe_f: 0.0 }
+    Circuit::new(parts, 0.0)
 }
 
 /// Frequencies of exact integration: small-signal 618.967 kHz; initial swing +50/+100/+150 V: 618.721/617.992/616.782 kHz.
@@ -154,6 +154,52 @@ fn the_tail_of_a_ring_has_the_frequency_of_the_linearised_circuit() {
         close(name, undamped_hz, ring.frequency_hz, tolerance);
         let from_frequency_f = 1.0 / ((std::f64::consts::TAU * undamped_hz).powi(2) * truth.primary_inductance_h);
         close(name, from_frequency_f, ring.node_capacitance_f, 2.0 * tolerance);
+    }
+}
+
+#[test]
+fn the_tail_of_a_leakage_ring_has_the_frequency_of_the_linearised_plateau() {
+    for (name, load_a) in [("beacon", 1.0), ("foghorn", 0.75), ("tidegauge", 0.4), ("winch", 1.0)] {
+        let plant = settled(name, 6, 230.0, load_a);
+        let (trace, truth) = capture(&plant, 1, 200e-6);
+        let ring = truth.leakage_rings[2];
+        let period_s = 1.0 / ring.frequency_hz;
+        // Past the loudest periods, where the capacitance of the transistor still varies over the swing.
+        let from_s = ring.start_s + 4.0 * period_s;
+        let level_v = trace.mean_v(from_s + 5.0 * period_s, ring.end_s);
+        let (damped_hz, periods) = trace.frequency(from_s, ring.end_s, level_v, 5);
+        assert!(periods >= 4, "{name}: {periods} periods");
+        let crest = |from_s: f64| trace.highest_v(from_s, from_s + period_s) - level_v;
+        let decay = (crest(from_s) / crest(from_s + 4.0 * period_s)).ln() / (4.0 * period_s);
+        let undamped_hz = (damped_hz.powi(2) + (decay / std::f64::consts::TAU).powi(2)).sqrt();
+        println!("{name}: {undamped_hz:.0} against {:.0}", ring.frequency_hz);
+        close(name, undamped_hz, ring.frequency_hz, 5e-3);
+    }
+}
+
+#[test]
+fn the_truth_about_cycles_is_in_order_and_counts_gaps_right() {
+    for (name, load_a) in [("beacon", 0.1), ("foghorn", 0.05), ("tidegauge", 0.1), ("winch", 0.1), ("pumphouse", 1.0)] {
+        let period_s = 1.0 / board(name).nominal.switching_frequency_hz;
+        let (trace, truth) = capture(&settled(name, 2, 150.0, load_a), 5, 1e-3);
+        for pair in truth.cycles.windows(2) {
+            let (cycle, next) = (pair[0], pair[1]);
+            let off_s = cycle.turn_off_s.unwrap();
+            assert!(cycle.turn_on_s < off_s && off_s < next.turn_on_s, "{name}");
+            // The drain is low while the gate is on, from some 100 ns after turn-on.
+            assert!(trace.highest_v(cycle.turn_on_s + 150e-9, off_s) < 5.0, "{name}");
+            let gap = (next.turn_on_s - cycle.turn_on_s) / period_s;
+            match cycle.mode {
+                ConductionMode::Continuous => assert!(cycle.demagnetised_s.is_none() && gap < 1.1, "{name}"),
+                ConductionMode::Skipped => assert!(cycle.demagnetised_s.is_some() && gap > 1.8, "{name}: {gap}"),
+                ConductionMode::Discontinuous => {
+                    let demagnetised_s = cycle.demagnetised_s.unwrap();
+                    assert!(off_s < demagnetised_s && demagnetised_s < next.turn_on_s, "{name}");
+                    assert!(gap < 1.1 || name == "tidegauge", "{name}: {gap}");
+                }
+                ConductionMode::Hiccup | ConductionMode::Unfinished => panic!("{name}: {:?}", cycle.mode),
+            }
+        }
     }
 }
 

@@ -105,3 +105,14 @@ fn without_line_the_output_falls_and_the_bulk_bleeds_down() {
     assert!(plant.bulk_voltage() < 60.0, "{} V", plant.bulk_voltage());
     assert!(plant.line_power() < 1e-6 && plant.line_current_rms() < 1e-3);
 }
+
+#[test]
+fn a_source_that_limits_every_cycle_still_lets_the_board_settle() {
+    let mut plant = started("winch", 85.0, 0.8, LoadDemand::Current(2.0));
+    for _ in 0..100 {
+        plant.advance(0.05);
+    }
+    assert!(plant.line_limiting(), "{} A", plant.line_current_rms());
+    assert!(plant.is_settled());
+    assert!((plant.output_voltage() - 19.0).abs() < 0.2, "{} V", plant.output_voltage());
+}

@@ -1,36 +1,12 @@
-//! The six boards as they are built.
+//! Boards whose light load leaves relaxation rings: beacon, foghorn, tidegauge, winch.
 
 use super::{
-    BoardModel, Clamp, ClampKind, ClampLevel, ControllerKind, ControllerParts, Diode, LightLoad, Nominal, Parts,
+    BoardModel, Clamp, ClampKind, ClampLevel, ControllerKind, ControllerParts, LightLoad, Nominal, Parts,
+    short::{diode, junction, knee},
 };
-use crate::converter::junction::CapacitanceLaw;
-
-/// Every board.
-pub fn all() -> &'static [BoardModel] {
-    &BOARDS
-}
-
-/// The board of that name.
-pub fn by_name(name: &str) -> Option<&'static BoardModel> {
-    BOARDS.iter().find(|board| board.name == name)
-}
-
-const fn junction(zero_bias_f: f64, potential_v: f64, grading: f64) -> CapacitanceLaw {
-    CapacitanceLaw::Junction { zero_bias_f, potential_v, grading }
-}
-
-const fn knee(low_f: f64, high_f: f64, knee_v: f64, width_v: f64) -> CapacitanceLaw {
-    CapacitanceLaw::Knee { low_f, high_f, knee_v, width_v }
-}
-
-const fn diode(drop_v: f64, series_ohm: f64, storage_s: f64, junction: CapacitanceLaw) -> Diode {
-    Diode { drop_v, series_ohm, storage_s, junction }
-}
-
-static BOARDS: [BoardModel; 6] = [BEACON, FOGHORN, TIDEGAUGE, WINCH, PUMPHOUSE, SEMAPHORE];
 
 /// 12 V, 2 A; resistor-capacitor clamp, smooth law, skips cycles.
-const BEACON: BoardModel = BoardModel {
+pub(super) const BEACON: BoardModel = BoardModel {
     name: "beacon",
     nominal: Nominal {
         primary_inductance_h: 1.1e-3,
@@ -97,7 +73,7 @@ const BEACON: BoardModel = BoardModel {
 };
 
 /// 24 V, 1.5 A; zener clamp, knee law, skips cycles.
-const FOGHORN: BoardModel = BoardModel {
+pub(super) const FOGHORN: BoardModel = BoardModel {
     name: "foghorn",
     nominal: Nominal {
         primary_inductance_h: 0.9e-3,
@@ -164,7 +140,7 @@ const FOGHORN: BoardModel = BoardModel {
 };
 
 /// 5 V, 2 A; resistor-capacitor clamp, smooth law, folds its frequency back.
-const TIDEGAUGE: BoardModel = BoardModel {
+pub(super) const TIDEGAUGE: BoardModel = BoardModel {
     name: "tidegauge",
     nominal: Nominal {
         primary_inductance_h: 1.4e-3,
@@ -231,7 +207,7 @@ const TIDEGAUGE: BoardModel = BoardModel {
 };
 
 /// 19 V, 3 A; a large transistor whose junction is most of the node, reflected voltage above 100 V.
-const WINCH: BoardModel = BoardModel {
+pub(super) const WINCH: BoardModel = BoardModel {
     name: "winch",
     nominal: Nominal {
         primary_inductance_h: 0.6e-3,
@@ -294,139 +270,5 @@ const WINCH: BoardModel = BoardModel {
         overload_s: 40e-3,
         restart_s: 0.5,
         supply_lasts_s: None,
-    },
-};
-
-/// 15 V, 1.0 A to 2.6 A; never leaves continuous conduction in that range.
-const PUMPHOUSE: BoardModel = BoardModel {
-    name: "pumphouse",
-    nominal: Nominal {
-        primary_inductance_h: 1.5e-3,
-        primary_inductance_tolerance: 0.05,
-        leakage_inductance_h: 22e-6,
-        turns_ratio: 5.0,
-        output_v: 15.0,
-        maximum_load_a: 2.6,
-        minimum_load_a: 1.0,
-        bulk_capacitance_f: 100e-6,
-        drain_rating_v: 650.0,
-        line_range_v: [85.0, 265.0],
-        switching_frequency_hz: 130e3,
-        clamp: ClampKind::ResistorCapacitorDiode,
-        clamp_v: 175.0,
-        controller: ControllerKind::CycleSkipping,
-    },
-    parts: Parts {
-        magnetising_h: 1.5e-3 - 22e-6,
-        leakage_h: 22e-6,
-        turns_ratio: 5.0,
-        winding_ohm: 0.5,
-        leakage_loss_ohm: 7e3,
-        core_ohm: 65e3,
-        core_growth: 0.3,
-        core_growth_v: 80.0,
-        winding_f: 38e-12,
-        transistor: junction(700e-12, 0.8, 0.5),
-        on_ohm: 1.0,
-        turn_on_a_per_s: 2e7,
-        turn_off_s: 25e-9,
-        body_v: 0.8,
-        clamp: Clamp {
-            level: ClampLevel::Capacitor { farad: 10e-9, bleed_ohm: 10e3 },
-            diode: diode(0.9, 39.0, 60e-9, junction(14e-12, 0.6, 0.5)),
-        },
-        rectifier: diode(0.5, 15e-3, 15e-9, junction(500e-12, 0.6, 0.5)),
-        secondary_f: 150e-12,
-        output_f: 1000e-6,
-        preload_ohm: 8e3,
-        bulk_f: 100e-6,
-        line_ohm: 2.5,
-    },
-    controller: ControllerParts {
-        light_load: LightLoad::Skip { hysteresis: 0.01 },
-        clock_hz: 130e3,
-        dither: 0.04,
-        dither_hz: 350.0,
-        peak_a: 1.6,
-        smallest_share: 0.2,
-        slope_a_per_s: 2e4,
-        blanking_s: 250e-9,
-        longest_duty: 0.72,
-        reference_v: 15.08,
-        droop_v: 0.14,
-        amplifier_s: 25e-6,
-        start_v: 75.0,
-        stop_v: 50.0,
-        soft_start_s: 8e-3,
-        overload_s: 30e-3,
-        restart_s: 0.4,
-        supply_lasts_s: None,
-    },
-};
-
-/// 12 V, 1.5 A; its auxiliary winding is open, so that it starts, collapses and starts again at every load.
-const SEMAPHORE: BoardModel = BoardModel {
-    name: "semaphore",
-    nominal: Nominal {
-        primary_inductance_h: 0.8e-3,
-        primary_inductance_tolerance: 0.07,
-        leakage_inductance_h: 20e-6,
-        turns_ratio: 9.0,
-        output_v: 12.0,
-        maximum_load_a: 1.5,
-        minimum_load_a: 0.0,
-        bulk_capacitance_f: 47e-6,
-        drain_rating_v: 650.0,
-        line_range_v: [85.0, 265.0],
-        switching_frequency_hz: 85e3,
-        clamp: ClampKind::ResistorCapacitorDiode,
-        clamp_v: 190.0,
-        controller: ControllerKind::CycleSkipping,
-    },
-    parts: Parts {
-        magnetising_h: 0.8e-3 - 20e-6,
-        leakage_h: 20e-6,
-        turns_ratio: 9.0,
-        winding_ohm: 0.6,
-        leakage_loss_ohm: 6e3,
-        core_ohm: 40e3,
-        core_growth: 0.3,
-        core_growth_v: 80.0,
-        winding_f: 28e-12,
-        transistor: junction(650e-12, 0.8, 0.5),
-        on_ohm: 1.4,
-        turn_on_a_per_s: 2e7,
-        turn_off_s: 25e-9,
-        body_v: 0.8,
-        clamp: Clamp {
-            level: ClampLevel::Capacitor { farad: 10e-9, bleed_ohm: 39e3 },
-            diode: diode(0.9, 47.0, 80e-9, junction(14e-12, 0.6, 0.5)),
-        },
-        rectifier: diode(0.45, 20e-3, 8e-9, junction(500e-12, 0.6, 0.5)),
-        secondary_f: 120e-12,
-        output_f: 470e-6,
-        preload_ohm: 6e3,
-        bulk_f: 47e-6,
-        line_ohm: 3.5,
-    },
-    controller: ControllerParts {
-        light_load: LightLoad::Skip { hysteresis: 0.01 },
-        clock_hz: 85e3,
-        dither: 0.04,
-        dither_hz: 370.0,
-        peak_a: 1.4,
-        smallest_share: 0.22,
-        slope_a_per_s: 4e4,
-        blanking_s: 250e-9,
-        longest_duty: 0.72,
-        reference_v: 12.06,
-        droop_v: 0.12,
-        amplifier_s: 25e-6,
-        start_v: 75.0,
-        stop_v: 50.0,
-        soft_start_s: 4e-3,
-        overload_s: 20e-3,
-        restart_s: 45e-3,
-        supply_lasts_s: Some(9e-3),
     },
 };
