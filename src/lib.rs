@@ -8,6 +8,7 @@
 
 pub mod files;
 pub mod instrument;
+pub mod record;
 pub mod scpi;
 pub mod sequence;
 pub mod station;

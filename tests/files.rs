@@ -47,16 +47,16 @@ fn a_tolerance_reaches_the_analysis_as_a_standard_uncertainty() {
     let facts = board.facts(&Station::read("station.toml", STATION).unwrap());
     let inductance = facts.primary_inductance_h.unwrap();
     assert!((inductance.value - 1.1e-3).abs() < 1e-15);
-    assert!((inductance.standard_uncertainty - 0.11e-3 / 3f64.sqrt()).abs() < 1e-12);
+    assert!((inductance.standard_uncertainty - 0.077e-3 / 3f64.sqrt()).abs() < 1e-12);
     let probe = facts.probe_capacitance_f.unwrap();
-    assert!((probe.standard_uncertainty - 0.5e-12 / 3f64.sqrt()).abs() < 1e-20);
-    assert!((facts.switching_period_s.unwrap() - 1.0 / 65e3).abs() < 1e-12);
+    assert!((probe.standard_uncertainty - 0.3e-12 / 3f64.sqrt()).abs() < 1e-20);
+    assert!((facts.switching_period_s.unwrap() - 1.0 / 105e3).abs() < 1e-12);
     assert_eq!(facts.skips_cycles, Some(true));
 }
 
 #[test]
 fn all_mistakes_of_a_file_are_found_at_once_and_each_where_it_stands() {
-    let mut text = with(STATION, "\"3.5 pF +- 0.5 pF\"\nbandwidth", "\"3.5 pV\"\nbandwidth");
+    let mut text = with(STATION, "\"5 pF +- 0.3 pF\"\nbandwidth", "\"3.5 pV\"\nbandwidth");
     text = with(&text, "factor = 100", "factor = \"100x\"");
     text = with(&text, "derating_frequency = ", "derating_frequenzy = ");
     text = with(&text, "channel = 1 ", "channel = 19    ");
@@ -129,6 +129,9 @@ fn another_kind_of_file_and_a_newer_version_are_the_only_mistake_reported() {
     let errors = board_errors(&with(BOARD, "ringstep board 1", "ringstep board 2").replace("turns_ratio", "turns"));
     assert_eq!(errors.errors.len(), 1, "{errors}");
     assert_eq!(errors.errors[0].help.as_deref(), Some("the file was written for a newer version of this program"));
+    let errors = board_errors(&with(BOARD, "format = \"ringstep board 1\"", ""));
+    assert_eq!((errors.errors.len(), errors.errors[0].mistake), (1, Mistake::Missing), "{errors}");
+    assert_eq!(errors.errors[0].help.as_deref(), Some("format = \"ringstep board 1\""));
 }
 
 #[test]

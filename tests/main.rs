@@ -2,10 +2,16 @@
 #![allow(clippy::unwrap_used, missing_docs)]
 
 mod by_hand;
+mod cli;
+mod dialects;
 mod drivers;
 mod files;
 mod instruments;
+mod invented;
+mod layering;
 mod need;
+mod preflight;
+mod record;
 mod safe_off;
 mod scpi;
 mod transport;

@@ -6,6 +6,8 @@
 //! No clock, file, socket or thread is used here.
 
 pub mod circuit;
+pub mod cycles;
 pub mod findings;
 pub mod fit;
 pub mod quantity;
+pub mod waveform;

@@ -40,7 +40,11 @@ impl<'t> Document<'t> {
     /// is the only mistake reported: nothing else in the file could be judged.
     pub fn format(&self, table: &Table<'_, 't>, kind: &str, version: u32) {
         let wanted = format!("ringstep {kind} {version}");
-        let Some(stated) = table.required("format", |value| value.text()) else { return };
+        if !table.has("format") {
+            table.missing("format", Some(format!("format = {wanted:?}")));
+            return;
+        }
+        let Some(stated) = table.required("format", Value::text) else { return };
         if stated == wanted {
             return;
         }
@@ -182,7 +186,8 @@ impl<'d, 't> Table<'d, 't> {
                 continue;
             }
             let free = asked.iter().copied().filter(|known| !self.entries.contains_key(*known));
-            let help = closest(word, free).map(|known| format!("did you mean `{known}`?"));
+            let meant = closest(word, free).or_else(|| closest(word, asked.iter().copied()));
+            let help = meant.map(|known| format!("did you mean `{known}`?"));
             let mut known = asked.clone();
             known.sort_unstable();
             known.dedup();

@@ -5,7 +5,7 @@ use super::{
     ScpiErrorKind, SessionOptions,
     block::{Parsed, parse_header},
     error::Failure,
-    response::{integer, parse_line},
+    response::parse_line,
 };
 use crate::transport::{BlockNote, Direction, ExchangeLog, Link, LinkErrorKind, Opener};
 use std::{sync::Arc, time::Duration};

@@ -2,5 +2,7 @@
 
 pub mod event;
 mod plan;
+mod preflight;
 
 pub use plan::*;
+pub use preflight::*;

@@ -3,7 +3,8 @@
 use crate::files::{Document, FileErrors, Table, Value};
 use ringstep_analysis::quantity::Unit;
 
-/// A plan.
+/// A plan. Its file looks like this:
+#[doc = concat!("```toml\n", include_str!("../guide/examples/plan.toml"), "```")]
 #[derive(Debug, Clone, PartialEq)]
 pub struct Plan {
     /// Name.
@@ -35,14 +36,16 @@ pub struct StressEstimate {
     pub leakage_spike_v: Option<f64>,
     /// Leakage-ring frequency to reckon with before it is measured.
     pub leakage_ring_hz: f64,
+    /// Relaxation-ring frequency to reckon with before it is measured.
+    pub relaxation_ring_hz: f64,
     /// Share of the drain rating that may be used.
     pub drain_derating: f64,
 }
 
 impl Default for StressEstimate {
-    /// A tenth of the rating kept back, and a leakage ring on the fast side of what boards show (common practice).
+    /// A tenth of the rating kept back, and rings on the fast side of what boards show (common practice).
     fn default() -> Self {
-        Self { leakage_spike_v: None, leakage_ring_hz: 10e6, drain_derating: 0.9 }
+        Self { leakage_spike_v: None, leakage_ring_hz: 10e6, relaxation_ring_hz: 1e6, drain_derating: 0.9 }
     }
 }
 
@@ -117,11 +120,13 @@ impl StressEstimate {
         let usual = Self::default();
         let leakage_spike_v = table.optional("leakage_spike", |value| value.quantity(Unit::Volt, 0.0..=5e3));
         let leakage_ring = table.optional("leakage_ring", |value| value.quantity(Unit::Hertz, 1e5..=1e9));
+        let relaxation_ring = table.optional("relaxation_ring", |value| value.quantity(Unit::Hertz, 1e4..=1e8));
         let derating = table.optional("drain_derating", |value| value.quantity(Unit::Percent, 0.1..=1.0));
         table.finish();
         Some(Self {
             leakage_spike_v: leakage_spike_v?,
             leakage_ring_hz: leakage_ring?.unwrap_or(usual.leakage_ring_hz),
+            relaxation_ring_hz: relaxation_ring?.unwrap_or(usual.relaxation_ring_hz),
             drain_derating: derating?.unwrap_or(usual.drain_derating),
         })
     }

@@ -7,7 +7,8 @@ use ringstep_analysis::{
     quantity::{Measured, Unit},
 };
 
-/// The board under test.
+/// The board under test. Its file looks like this:
+#[doc = concat!("```toml\n", include_str!("../guide/examples/board.toml"), "```")]
 #[derive(Debug, Clone, PartialEq)]
 pub struct Board {
     /// Name.
@@ -232,20 +233,17 @@ impl Output {
         let minimum_load_a = table.required("minimum_load", |value| value.quantity(Unit::Ampere, 0.0..=1e3));
         let turns_ratio = table.required("turns_ratio", |value| value.number(0.01..=1e3));
         let rectifier = table.required("rectifier", |value| value.choice(&Rectifier::WORDS));
-        if let (Some(voltage), Some([low, high])) = (voltage_v, regulation_v) {
-            if !(low..=high).contains(&voltage) {
-                let found = format!("{low} V to {high} V");
-                table.refuse("regulation", found, format!("expected a window around the nominal {voltage} V"));
-            }
+        if let (Some(voltage), Some([low, high])) = (voltage_v, regulation_v)
+            && !(low..=high).contains(&voltage)
+        {
+            let found = format!("{low} V to {high} V");
+            table.refuse("regulation", found, format!("expected a window around the nominal {voltage} V"));
         }
-        if let (Some(least), Some(most)) = (minimum_load_a, maximum_load_a) {
-            if least >= most {
-                table.refuse(
-                    "minimum_load",
-                    format!("{least} A"),
-                    format!("expected less than maximum_load, {most} A"),
-                );
-            }
+        if let (Some(least), Some(most)) = (minimum_load_a, maximum_load_a)
+            && least >= most
+        {
+            let expected = format!("expected less than maximum_load, {most} A");
+            table.refuse("minimum_load", format!("{least} A"), expected);
         }
         table.finish();
         Some(Self {

@@ -3,7 +3,8 @@
 use crate::files::{Document, FileErrors, Table, Value};
 use ringstep_analysis::quantity::{Measured, Unit};
 
-/// A station.
+/// A station. Its file looks like this:
+#[doc = concat!("```toml\n", include_str!("../guide/examples/station.toml"), "```")]
 #[derive(Debug, Clone, PartialEq)]
 pub struct Station {
     /// Name of the bench or place on the line.

@@ -2,12 +2,14 @@
 
 mod board;
 mod by_hand;
+mod cautions;
 mod config;
 mod connect;
 mod safe_off;
 
 pub use board::*;
 pub use by_hand::{ByHandLoad, ByHandSource, Operator};
+pub use cautions::*;
 pub use config::*;
 pub use connect::{Connected, connect, open_dialect};
 pub use safe_off::{OffState, SafeOff, SafeOffReport};

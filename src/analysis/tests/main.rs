@@ -6,3 +6,5 @@ mod need;
 
 mod circuit;
 mod quantity;
+mod recording_flyback;
+mod waveform;

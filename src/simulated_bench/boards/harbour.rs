@@ -64,7 +64,7 @@ const BEACON: BoardModel = BoardModel {
         turn_off_s: 25e-9,
         body_v: 0.8,
         clamp: Clamp {
-            level: ClampLevel::Capacitor { farad: 10e-9, bleed_ohm: 68e3 },
+            level: ClampLevel::Capacitor { farad: 6.8e-9, bleed_ohm: 120e3 },
             diode: diode(0.9, 47.0, 80e-9, junction(14e-12, 0.6, 0.5)),
         },
         rectifier: diode(0.45, 20e-3, 8e-9, junction(600e-12, 0.6, 0.5)),
@@ -265,7 +265,7 @@ const WINCH: BoardModel = BoardModel {
         turn_off_s: 25e-9,
         body_v: 0.8,
         clamp: Clamp {
-            level: ClampLevel::Capacitor { farad: 22e-9, bleed_ohm: 18e3 },
+            level: ClampLevel::Capacitor { farad: 10e-9, bleed_ohm: 36e3 },
             diode: diode(0.9, 33.0, 70e-9, junction(20e-12, 0.6, 0.5)),
         },
         rectifier: diode(0.6, 12e-3, 12e-9, junction(800e-12, 0.6, 0.5)),

@@ -62,15 +62,16 @@ impl Average<'_> {
         let (p, c) = (&self.circuit.parts, self.control);
         let share = command.max(c.smallest_share);
         let reflected_v = self.circuit.reflected_v(output_v.max(0.1));
-        let (peak_a, period_s) = (share * c.peak_a, 1.0 / c.clock_hz);
         let inductance_h = p.magnetising_h + p.leakage_h;
+        let (asked_a, period_s) = (share * c.peak_a, 1.0 / c.clock_hz);
+        let peak_a = asked_a / (1.0 + c.slope_a_per_s * inductance_h / bulk_v.max(1.0));
         let duration_s = inductance_h * peak_a * (1.0 / bulk_v.max(1.0) + 1.0 / reflected_v);
         let power_w = if duration_s < period_s {
             0.5 * inductance_h * peak_a * peak_a * c.clock_hz
         } else {
             let duty = reflected_v / (reflected_v + bulk_v.max(1.0));
             let ripple_a = bulk_v * duty * period_s / inductance_h;
-            bulk_v * duty * (peak_a - c.slope_a_per_s * duty * period_s - 0.5 * ripple_a).max(0.0)
+            bulk_v * duty * (asked_a - c.slope_a_per_s * duty * period_s - 0.5 * ripple_a).max(0.0)
         };
         let thinned = power_w * (command / share).min(1.0);
         EFFICIENCY * thinned / (output_v.max(0.1) + p.rectifier.drop_v)

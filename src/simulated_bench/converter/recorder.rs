@@ -84,13 +84,33 @@ impl Recorder {
         }
     }
 
-    pub(super) fn clamp_releases(&mut self, time_s: f64) {
-        self.released_s = Some(time_s);
+    /// While the rectifier conducts, the leakage rings from here; where the clamp alone took the pulse, or flattened a crest
+    /// of the relaxation ring, that ring is free from here.
+    pub(super) fn clamp_releases(&mut self, time_s: f64, rectifier_on: bool) {
+        if rectifier_on {
+            self.released_s = Some(time_s);
+        } else {
+            self.demagnetised(time_s);
+        }
     }
 
-    /// A ring that lifts the rectifier again is no free ring; it starts anew when the rectifier blocks.
-    pub(super) fn rectifier_conducts(&mut self) {
+    /// A ring that makes a diode conduct again is not free; it starts anew when the diode blocks.
+    pub(super) fn interrupted(&mut self) {
         self.ring = None;
+    }
+
+    /// A ring that reached the body diode is free from here on.
+    pub(super) fn body_blocks(&mut self, time_s: f64) {
+        if let Some(ring) = &mut self.ring {
+            *ring = Span { start_s: time_s, length_s: 0.0, bulk_v_s: 0.0 };
+        }
+    }
+
+    fn demagnetised(&mut self, time_s: f64) {
+        if let Some(last) = self.truth.cycles.last_mut() {
+            last.demagnetised_s.get_or_insert(time_s);
+        }
+        self.ring = Some(Span { start_s: time_s, length_s: 0.0, bulk_v_s: 0.0 });
     }
 
     pub(super) fn rectifier_blocks(&mut self, time_s: f64, gate_off: bool, circuit: &Circuit, state: &State) {
@@ -99,10 +119,7 @@ impl Recorder {
         }
         self.truth.leakage_rings.extend(self.leakage_ring(circuit, state, time_s));
         self.released_s = None;
-        if let Some(last) = self.truth.cycles.last_mut() {
-            last.demagnetised_s.get_or_insert(time_s);
-        }
-        self.ring = Some(Span { start_s: time_s, length_s: 0.0, bulk_v_s: 0.0 });
+        self.demagnetised(time_s);
     }
 
     pub(super) fn skips(&mut self) {

@@ -68,8 +68,9 @@ const EDGE_STEP_S: f64 = 1e-9;
 /// Longest step shortly after an event, and how long "shortly" is.
 const FRESH_STEP_S: f64 = 2e-9;
 const FRESH_S: f64 = 150e-9;
-/// Longest step otherwise.
+/// Longest step while the leakage rings, and otherwise.
 const CALM_STEP_S: f64 = 8e-9;
+const QUIET_STEP_S: f64 = 12e-9;
 /// Longest step while nothing moves.
 const IDLE_STEP_S: f64 = 1e-6;
 /// Ring amplitude below which nothing is taken to move.
@@ -103,7 +104,7 @@ impl Stepper {
             settled_until_s: 0.0,
             step_scale: 1.0,
             // Runge-Kutta of fourth order is stable to 2.8 rad a step; the secondary's own ring is the fastest.
-            longest_step_s: CALM_STEP_S.min(1.5 * fastest_s),
+            longest_step_s: 1.7 * fastest_s,
             recorder: Recorder::new(&circuit),
         }
     }
@@ -240,7 +241,8 @@ impl Stepper {
             Channel::Rising(_) | Channel::Falling(..) => EDGE_STEP_S,
             _ if self.on.clamp || self.on.body => EDGE_STEP_S,
             _ if self.time_s < self.settled_until_s => FRESH_STEP_S,
-            _ => CALM_STEP_S,
+            _ if self.on.rectifier => CALM_STEP_S,
+            _ => QUIET_STEP_S,
         };
         step_s.min(self.longest_step_s) * self.step_scale
     }
@@ -307,15 +309,16 @@ impl Stepper {
             Event::ClampConducts => {
                 self.on.clamp = true;
                 self.state.clamp_c = 0.0;
+                self.recorder.interrupted();
             }
             Event::ClampReleases => {
                 self.on.clamp = false;
-                self.recorder.clamp_releases(self.time_s);
+                self.recorder.clamp_releases(self.time_s, self.on.rectifier);
             }
             Event::RectifierConducts => {
                 self.on.rectifier = true;
                 self.state.rectifier_c = 0.0;
-                self.recorder.rectifier_conducts();
+                self.recorder.interrupted();
             }
             Event::RectifierBlocks => {
                 self.on.rectifier = false;
@@ -326,7 +329,10 @@ impl Stepper {
                 self.on.body = true;
                 self.state.drain_v = -self.circuit.parts.body_v;
             }
-            Event::BodyBlocks => self.on.body = false,
+            Event::BodyBlocks => {
+                self.on.body = false;
+                self.recorder.body_blocks(self.time_s);
+            }
         }
     }
 

@@ -5,9 +5,13 @@
 #[path = "../../../tests/need.rs"]
 mod need;
 
+mod boards;
 mod client;
+mod converter;
 mod instruments;
+mod ngspice;
 mod process;
 mod pyvisa;
 mod scope;
+mod trace;
 mod wires;
