@@ -205,10 +205,7 @@ async fn a_load_never_holds_a_current_above_its_range() {
         draws.push((set_a, range_a, on));
     }
     assert!(draws.contains(&(0.02, 3.0, true)), "a small current is drawn in the small range: {draws:?}");
-    assert!(
-        draws.contains(&(12.0, 3.0, false)) || draws.iter().any(|draw| !draw.2),
-        "no current is the input switched off"
-    );
+    assert!(draws[1..].iter().any(|(_, _, on)| !on), "no current is the input switched off: {draws:?}");
     assert_eq!(draws.last(), Some(&(2.9, 3.0, true)));
     assert_eq!(load.draw(30.5).await.unwrap_err().kind, Kind::OutOfRange);
 }
