@@ -3,6 +3,7 @@
 
 mod by_hand;
 mod cli;
+mod dialects;
 mod drivers;
 mod files;
 mod instruments;

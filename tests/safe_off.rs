@@ -116,6 +116,26 @@ async fn a_long_exchange_under_way_does_not_hold_it_up() {
     assert_eq!(peer.opened(), 2);
 }
 
+/// On a serial line a late answer of before, `0` volts, must not pass for `0`, off.
+#[tokio::test(start_paused = true)]
+async fn a_late_answer_does_not_pass_for_the_confirmation() {
+    let (peer, _) = source(|message| match message {
+        "MEASure:VOLTage?" => Some(Act::late(Duration::from_millis(320), "0")),
+        "OUTPut?" => Some(Act::late(Duration::from_millis(100), "1")),
+        _ => None,
+    });
+    let peer = peer.as_one_line();
+    let (_, log) = log();
+    let (session, source) = switch("source-ac-scpi", "output", SOURCE, &peer, &log).await;
+    let busy = tokio::spawn(async move { session.query("MEASure:VOLTage?").await });
+    tokio::time::sleep(Duration::from_millis(10)).await;
+    let begun = Instant::now();
+    let report = SafeOff::new(Some(source), None).off().await;
+    assert!(matches!(report.source, OffState::Unconfirmed(_)), "{report:?}");
+    assert!(begun.elapsed() < BOUND);
+    assert!(busy.await.unwrap().is_err());
+}
+
 #[tokio::test(start_paused = true)]
 async fn a_broken_link_is_replaced_and_a_refusing_one_is_told() {
     let (peer, on) = source(|message| (message == "BREAK").then(|| vec![Act::Break(Duration::ZERO)]));

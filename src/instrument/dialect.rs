@@ -218,7 +218,7 @@ impl OffSwitch {
 
     /// Switches off and confirms it by reading back; ends within [`OffSwitch::LIVE`] + [`OffSwitch::FRESH`].
     pub async fn off(&self) -> Result<(), InstrumentError> {
-        if let Ok(Ok(())) = timeout(Self::LIVE, self.confirm(&self.dialect)).await {
+        if let Ok(Ok(())) = timeout(Self::LIVE, self.confirm(&self.dialect, false)).await {
             return Ok(());
         }
         // Whatever exchange is under way would only be in the way of the fresh link.
@@ -240,22 +240,31 @@ impl OffSwitch {
                 Err(_) => sleep(PAUSE).await,
             }
         };
-        self.confirm(&Dialect { session, ..self.dialect.clone() }).await
+        self.confirm(&Dialect { session, ..self.dialect.clone() }, true).await
     }
 
-    /// The command goes out before any question: an instrument that no longer answers may still obey.
-    async fn confirm(&self, dialect: &Dialect) -> Result<(), InstrumentError> {
+    /// The command goes out before any question: an instrument that no longer answers may still obey. Twice if need be,
+    /// since on a serial line the first may follow half a command of before; and there an answer of before must not pass
+    /// for the confirmation.
+    async fn confirm(&self, dialect: &Dialect, fresh: bool) -> Result<(), InstrumentError> {
         let words = &dialect.command(self.key)?.words;
         let off = words.get("off").and_then(|words| words.first()).cloned().unwrap_or_default();
         let command = dialect.filled(self.key, Part::Set, None, &off)?;
-        if let Ok(command) = dialect.filled("remote", Part::Set, None, "") {
+        let question = dialect.filled(self.key, Part::Get, None, "")?;
+        let mut answer = String::new();
+        for _ in 0..2 {
+            if let Ok(remote) = dialect.filled("remote", Part::Set, None, "") {
+                dialect.session.write(&remote).await?;
+            }
             dialect.session.write(&command).await?;
+            if fresh {
+                dialect.session.distrust().await?;
+            }
+            answer = dialect.session.query(&question).await?;
+            if dialect.means(self.key, &answer) == Some("off") {
+                return Ok(());
+            }
         }
-        dialect.session.write(&command).await?;
-        let answer = dialect.text(self.key, None).await?;
-        match dialect.means(self.key, &answer) {
-            Some("off") => Ok(()),
-            _ => Err(dialect.error(Kind::NotAsSet, format!("sent `{command}`, read back `{answer}`"))),
-        }
+        Err(dialect.error(Kind::NotAsSet, format!("sent `{command}`, read back `{answer}`")))
     }
 }

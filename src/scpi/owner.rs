@@ -5,7 +5,7 @@ use super::{
     ScpiErrorKind, SessionOptions,
     block::{Parsed, parse_header},
     error::Failure,
-    response::{integer, parse_line},
+    response::parse_line,
 };
 use crate::transport::{BlockNote, Direction, ExchangeLog, Link, LinkErrorKind, Opener};
 use std::{sync::Arc, time::Duration};
@@ -22,6 +22,7 @@ pub(super) enum Ask {
     Block,
     Reconnection,
     Closing,
+    Distrust,
 }
 
 pub(super) enum Reply {
@@ -43,6 +44,7 @@ pub(super) struct Request {
 const FIRST_PAUSE: Duration = Duration::from_millis(20);
 const LONGEST_PAUSE: Duration = Duration::from_secs(1);
 pub(super) const IDENTITY: &str = "*IDN?";
+
 pub(super) struct Owner {
     link: Option<Box<dyn Link>>,
     opener: Arc<dyn Opener>,
@@ -115,6 +117,10 @@ impl Owner {
                 self.lose("closed").await;
                 return Ok(Reply::Done);
             }
+            Ask::Distrust => {
+                self.out_of_step = true;
+                return Ok(Reply::Done);
+            }
             Ask::Nothing | Ask::Line | Ask::Block => {}
         }
         if request.command.contains(['\n', '\r']) {
@@ -145,7 +151,7 @@ impl Owner {
         match request.ask {
             Ask::Line => self.read_line(deadline).await.map(Reply::Line),
             Ask::Block => self.read_block(deadline, request.stall).await.map(Reply::Block),
-            Ask::Nothing | Ask::Reconnection | Ask::Closing => Ok(Reply::Done),
+            Ask::Nothing | Ask::Reconnection | Ask::Closing | Ask::Distrust => Ok(Reply::Done),
         }
         .inspect(|reply| self.learn_identity(&request.command, reply))
     }

@@ -166,6 +166,11 @@ impl Session {
         self.ask("", Ask::Reconnection, within).await.map(|_| ())
     }
 
+    /// Answers to questions of an earlier user of the line may still be under way: the next exchange drops them first.
+    pub async fn distrust(&self) -> Result<(), Box<ScpiError>> {
+        self.ask("", Ask::Distrust, self.options.reply_timeout).await.map(|_| ())
+    }
+
     /// Gives the link up at once, whatever exchange is under way; it fails as lost.
     pub fn abandon(&self) {
         self.abandon.notify_one();

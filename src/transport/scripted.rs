@@ -37,7 +37,21 @@ struct Shared {
     received: Vec<String>,
     opened: usize,
     refusals: usize,
+    line: Line,
 }
+
+/// How the links of one peer depend on each other.
+enum Line {
+    /// Not at all, as sockets.
+    Apart,
+    /// One at a time, and nobody holds it; what is under way meets the next.
+    Free(Arrivals),
+    /// One at a time, and somebody holds it.
+    Held,
+}
+
+/// What arrives when; `None` is the end of the link.
+type Arrivals = VecDeque<(Instant, Option<Vec<u8>>)>;
 
 /// Opens links to one closure; clones share it.
 #[derive(Clone)]
@@ -46,7 +60,19 @@ pub struct Scripted(Arc<Mutex<Shared>>);
 impl Scripted {
     /// The closure is called with each message, without its newline, and says what comes back.
     pub fn new(peer: impl FnMut(&str) -> Vec<Act> + Send + 'static) -> Self {
-        Self(Arc::new(Mutex::new(Shared { peer: Box::new(peer), received: Vec::new(), opened: 0, refusals: 0 })))
+        Self(Arc::new(Mutex::new(Shared {
+            peer: Box::new(peer),
+            received: Vec::new(),
+            opened: 0,
+            refusals: 0,
+            line: Line::Apart,
+        })))
+    }
+
+    /// Like a serial line: one link at a time, and what is under way when it is closed arrives at the next.
+    pub fn as_one_line(self) -> Self {
+        self.with(|shared| shared.line = Line::Free(Arrivals::new()));
+        self
     }
 
     /// Refuses the next `count` attempts to open a link.
@@ -75,19 +101,27 @@ impl Opener for Scripted {
     }
 
     fn open(&self, _deadline: Instant) -> Wire<'_, Box<dyn Link>> {
-        let refused = self.with(|shared| {
-            let refused = shared.refusals > 0;
-            shared.refusals = shared.refusals.saturating_sub(1);
-            shared.opened += usize::from(!refused);
-            refused
-        });
-        let link = ScriptedLink { peer: self.clone(), partial: Vec::new(), arriving: VecDeque::new() };
-        Box::pin(async move {
-            if refused {
-                Err(LinkError::new(LinkErrorKind::Refused, "open"))
-            } else {
-                Ok(Box::new(link) as Box<dyn Link>)
+        let arriving = self.with(|shared| {
+            if shared.refusals > 0 {
+                shared.refusals -= 1;
+                return None;
             }
+            let arriving = match &mut shared.line {
+                Line::Apart => Arrivals::new(),
+                Line::Held => return None,
+                Line::Free(arriving) => {
+                    let arriving = std::mem::take(arriving);
+                    shared.line = Line::Held;
+                    arriving
+                }
+            };
+            shared.opened += 1;
+            Some(arriving)
+        });
+        let link = arriving.map(|arriving| ScriptedLink { peer: self.clone(), partial: Vec::new(), arriving });
+        Box::pin(async move {
+            let link = link.ok_or_else(|| LinkError::new(LinkErrorKind::Refused, "open"))?;
+            Ok(Box::new(link) as Box<dyn Link>)
         })
     }
 }
@@ -95,8 +129,7 @@ impl Opener for Scripted {
 struct ScriptedLink {
     peer: Scripted,
     partial: Vec<u8>,
-    /// What arrives when; `None` is the end of the link.
-    arriving: VecDeque<(Instant, Option<Vec<u8>>)>,
+    arriving: Arrivals,
 }
 
 impl ScriptedLink {
@@ -115,6 +148,17 @@ impl ScriptedLink {
 
     fn closed<T>() -> Result<T, LinkError> {
         Err(LinkError::new(LinkErrorKind::Closed, "the other side closed the link"))
+    }
+}
+
+impl Drop for ScriptedLink {
+    fn drop(&mut self) {
+        let arriving = std::mem::take(&mut self.arriving);
+        self.peer.with(|shared| {
+            if let Line::Held = shared.line {
+                shared.line = Line::Free(arriving);
+            }
+        });
     }
 }
 
