@@ -29,7 +29,7 @@ pub(super) fn cycle(id: &str, trace: &Trace, findings: &Findings, cycle: Cycle, 
     let from = (cycle.start_s - 0.06 * (until - cycle.start_s)).max(trace.start_s);
     let y = Axis::around(trace.between(from, until).map(|(_, v)| v).chain([0.0]), 0.05, "drain voltage", "V");
     let x = Axis { low: from, high: until, name: "time from the trigger", unit: "s" };
-    let axes = Axes { left: 66.0, top: 64.0, width: WIDTH - 66.0 - 122.0, height: 330.0, x, y };
+    let axes = Axes { left: 66.0, top: 64.0, width: WIDTH - 66.0 - 142.0, height: 330.0, x, y };
     let mut svg = Svg::new(WIDTH, 446.0);
     axes.draw(&mut svg, true);
     levels(&mut svg, &axes, trace, findings, [cycle.turn_off_s, until]);
@@ -73,7 +73,7 @@ fn features(trace: &Trace, findings: &Findings, cycle: Cycle, until: f64, ring_p
     let plateau_s = clamp.0 + 0.7 * (knee - clamp.0);
     let mut features = vec![
         ("turn-on", cycle.start_s, at(cycle.start_s)),
-        ("on", 0.5 * (cycle.start_s + cycle.turn_off_s), at(0.5 * (cycle.start_s + cycle.turn_off_s))),
+        ("on-state", 0.5 * (cycle.start_s + cycle.turn_off_s), at(0.5 * (cycle.start_s + cycle.turn_off_s))),
         ("turn-off", cycle.turn_off_s, at(cycle.turn_off_s)),
         ("clamp", clamp.0, clamp.1),
         ("leakage ring", ring_s, at(ring_s)),
@@ -89,7 +89,7 @@ fn features(trace: &Trace, findings: &Findings, cycle: Cycle, until: f64, ring_p
 
 /// Names in one row above the curve, pushed apart, each with a thin line to its place.
 fn name_features(svg: &mut Svg, axes: &Axes, features: &[Feature]) {
-    const CHARACTER: f64 = 6.9;
+    const CHARACTER: f64 = 7.9;
     let width = |name: &str| name.chars().count() as f64 * CHARACTER + 16.0;
     let places: Vec<[f64; 2]> = features.iter().map(|(_, time, volts)| axes.place(*time, *volts)).collect();
     let mut centres = Vec::new();
