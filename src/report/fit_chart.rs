@@ -37,7 +37,7 @@ pub(super) fn draw(id: &str, trace: &Trace, fit: &RingFit) -> String {
     svg.polyline("residual", &thinned(&below, residuals()));
     for level in spread {
         let [_, y] = below.place(0.0, level);
-        svg.line("level", [below.left, y], [below.right(), y]);
+        svg.line("level over", [below.left, y], [below.right(), y]);
     }
     svg.finish(id, &format!("{} and its fit", title(fit.kind)), &describe(fit))
 }
