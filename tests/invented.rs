@@ -216,6 +216,34 @@ fn write_point(writer: &mut RunWriter, index: usize, line_v: f64) {
 
 /// A whole run of two points and a refused one, written event by event.
 pub(crate) fn write_run(folder: &Path) {
+    let mut writer = begin(folder);
+    write_point(&mut writer, 0, 115.0);
+    write_point(&mut writer, 1, 230.0);
+    let reason = "the output never settled at 265 V; check the board".to_owned();
+    writer.event(&Event::PointRefused { index: 2, line_v: 265.0, reason }).unwrap();
+    writer.event(&Event::Noted { note: "the load input was warm".into() }).unwrap();
+    end(writer, Outcome::Partial);
+}
+
+/// A run of many points.
+pub(crate) fn write_sweep(folder: &Path, points: usize) {
+    let mut writer = begin(folder);
+    for index in 0..points {
+        write_point(&mut writer, index, 90.0 + 12.0 * index as f64);
+    }
+    end(writer, Outcome::Complete);
+}
+
+/// A run that took one survey and then refused to measure.
+pub(crate) fn write_refused_run(folder: &Path, waveform: RawWaveform) {
+    let mut writer = begin(folder);
+    let mut survey = Capture { waveform, ..capture(0, 0, 115.0, Purpose::Survey, 0.5) };
+    writer.capture(&mut survey).unwrap();
+    writer.event(&Event::Captured(survey)).unwrap();
+    end(writer, Outcome::Refused);
+}
+
+fn begin(folder: &Path) -> RunWriter {
     let run_id = uuid::Uuid::now_v7();
     let mut writer = RunWriter::create(folder, &inputs(), run_id).unwrap();
     let (run, software_version) = (run_id.to_string(), "0.1.0".to_owned());
@@ -225,16 +253,15 @@ pub(crate) fn write_run(folder: &Path) {
         writer.event(&Event::InstrumentIdentified { role: role.into(), identity }).unwrap();
         writer.exchange_log().append(&serde_json::json!({"to": role, "sent": "*IDN?"})).unwrap();
     }
-    for (check, passed) in [("peak drain voltage against the probe", true), ("earthing of probe and source", true)] {
+    for check in ["peak drain voltage against the probe", "earthing of probe and source"] {
         let detail = "475 V expected, 1000 V rated".to_owned();
-        writer.event(&Event::PreflightChecked { check: check.into(), passed, detail }).unwrap();
+        writer.event(&Event::PreflightChecked { check: check.into(), passed: true, detail }).unwrap();
     }
-    write_point(&mut writer, 0, 115.0);
-    write_point(&mut writer, 1, 230.0);
-    let reason = "the output never settled at 265 V; check the board".to_owned();
-    writer.event(&Event::PointRefused { index: 2, line_v: 265.0, reason }).unwrap();
-    writer.event(&Event::Noted { note: "the load input was warm".into() }).unwrap();
+    writer
+}
+
+fn end(mut writer: RunWriter, outcome: Outcome) {
     writer.event(&Event::SafeOff { reason: "finished".into(), source_off: true, load_off: true }).unwrap();
-    writer.event(&Event::RunEnded { outcome: Outcome::Partial, message: None }).unwrap();
+    writer.event(&Event::RunEnded { outcome, message: None }).unwrap();
     writer.finish().unwrap();
 }

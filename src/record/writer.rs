@@ -97,16 +97,19 @@ impl RunWriter {
         Ok(())
     }
 
+    /// Notes the checksum of a file that will not grow any more, and gives its bytes.
+    fn seal(&mut self, name: &str) -> Result<Vec<u8>, RecordError> {
+        let path = self.folder.join(name);
+        let bytes = fs::read(&path).map_err(RecordError::io("read", &path))?;
+        self.manifest.sha256.insert(name.to_owned(), durable::sha256(&bytes));
+        Ok(bytes)
+    }
+
     /// Closes the record: results and table from the journal as it stands on disk, and the manifest with every checksum.
     pub fn finish(mut self) -> Result<Results, RecordError> {
         self.exchange.sync()?;
-        for name in [JOURNAL, EXCHANGE] {
-            let path = self.folder.join(name);
-            let bytes = fs::read(&path).map_err(RecordError::io("read", &path))?;
-            self.manifest.sha256.insert(name.to_owned(), durable::sha256(&bytes));
-        }
-        let path = self.folder.join(JOURNAL);
-        let bytes = fs::read(&path).map_err(RecordError::io("read", &path))?;
+        self.seal(EXCHANGE)?;
+        let (path, bytes) = (self.folder.join(JOURNAL), self.seal(JOURNAL)?);
         let journal = journal::read(&bytes).map_err(|(line, reason)| {
             let path = path.clone();
             RecordError::Broken { path, line: Some(line), reason }

@@ -6,12 +6,29 @@ use super::{
     text,
     trace::{Trace, thinned},
 };
+use crate::sequence::event::PointValues;
 use ringstep_analysis::findings::{Cycle, CycleMode, Findings, RingKind};
 
 const WIDTH: f64 = 960.0;
 
 /// A feature of the cycle: its name, and where on the curve it is.
 type Feature = (&'static str, f64, f64);
+
+/// Levels that the drain moves between.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Levels {
+    bulk_v: Option<f64>,
+    reflected_v: Option<f64>,
+}
+
+impl Levels {
+    /// The point's levels: a single short capture cannot tell them as well.
+    pub(super) fn of(values: &PointValues, findings: &Findings) -> Levels {
+        let bulk_v = values.bulk_voltage_v.or(findings.bulk_voltage_v).map(|bulk| bulk.value);
+        let reflected_v = values.reflected_voltage_v.or(findings.reflected_voltage_v).map(|reflected| reflected.value);
+        Levels { bulk_v, reflected_v }
+    }
+}
 
 /// The cycle that shows most: one with a knee, the longest of them.
 pub(super) fn most_telling(findings: &Findings, trace: &Trace) -> Option<Cycle> {
@@ -22,17 +39,24 @@ pub(super) fn most_telling(findings: &Findings, trace: &Trace) -> Option<Cycle> 
 }
 
 /// The cycle drawn from its turn-on to some periods of its relaxation ring, every part named.
-pub(super) fn cycle(id: &str, trace: &Trace, findings: &Findings, cycle: Cycle, ring_period_s: Option<f64>) -> String {
+pub(super) fn cycle(
+    id: &str,
+    trace: &Trace,
+    findings: &Findings,
+    levels: Levels,
+    cycle: Cycle,
+    ring_period_s: Option<f64>,
+) -> String {
     let knee_s = cycle.end_of_demagnetisation_s.unwrap_or(cycle.end_s);
     let shown = ring_period_s.map_or(knee_s - cycle.start_s, |period| period * 7.0);
     let until = (knee_s + shown).min(cycle.end_s + 0.04 * (cycle.end_s - cycle.start_s)).min(trace.end_s());
     let from = (cycle.start_s - 0.06 * (until - cycle.start_s)).max(trace.start_s);
     let y = Axis::around(trace.between(from, until).map(|(_, v)| v).chain([0.0]), 0.05, "drain voltage", "V");
     let x = Axis { low: from, high: until, name: "time from the trigger", unit: "s" };
-    let axes = Axes { left: 66.0, top: 64.0, width: WIDTH - 66.0 - 122.0, height: 330.0, x, y };
+    let axes = Axes { left: 66.0, top: 64.0, width: WIDTH - 66.0 - 142.0, height: 330.0, x, y };
     let mut svg = Svg::new(WIDTH, 446.0);
     axes.draw(&mut svg, true);
-    levels(&mut svg, &axes, trace, findings, [cycle.turn_off_s, until]);
+    draw_levels(&mut svg, &axes, levels, trace.highest(cycle.turn_off_s, until));
     svg.polyline("data", &thinned(&axes, trace.between(from, until)));
     let features = features(trace, findings, cycle, until, ring_period_s);
     name_features(&mut svg, &axes, &features);
@@ -44,12 +68,9 @@ pub(super) fn cycle(id: &str, trace: &Trace, findings: &Findings, cycle: Cycle, 
 }
 
 /// Dashed levels with their names at the right: bulk, reflected, peak; names never on top of each other.
-fn levels(svg: &mut Svg, axes: &Axes, trace: &Trace, findings: &Findings, [from, until]: [f64; 2]) {
-    let bulk = findings.bulk_voltage_v.map(|bulk| bulk.value);
-    let reflected = findings.reflected_voltage_v.map(|reflected| reflected.value);
-    let peak = trace.highest(from, until).map(|(_, volts)| volts);
-    let plateau = bulk.zip(reflected).map(|(bulk, reflected)| bulk + reflected);
-    let levels = [("peak", peak), ("bulk + reflected", plateau), ("bulk", bulk)];
+fn draw_levels(svg: &mut Svg, axes: &Axes, Levels { bulk_v, reflected_v }: Levels, peak: Option<(f64, f64)>) {
+    let plateau_v = bulk_v.zip(reflected_v).map(|(bulk, reflected)| bulk + reflected);
+    let levels = [("peak", peak.map(|(_, volts)| volts)), ("bulk + reflected", plateau_v), ("bulk", bulk_v)];
     let mut above = f64::NEG_INFINITY;
     for (name, level) in levels.into_iter().filter_map(|(name, level)| Some((name, level?))) {
         let [_, y] = axes.place(axes.x.low, level);
@@ -73,7 +94,7 @@ fn features(trace: &Trace, findings: &Findings, cycle: Cycle, until: f64, ring_p
     let plateau_s = clamp.0 + 0.7 * (knee - clamp.0);
     let mut features = vec![
         ("turn-on", cycle.start_s, at(cycle.start_s)),
-        ("on", 0.5 * (cycle.start_s + cycle.turn_off_s), at(0.5 * (cycle.start_s + cycle.turn_off_s))),
+        ("on-state", 0.5 * (cycle.start_s + cycle.turn_off_s), at(0.5 * (cycle.start_s + cycle.turn_off_s))),
         ("turn-off", cycle.turn_off_s, at(cycle.turn_off_s)),
         ("clamp", clamp.0, clamp.1),
         ("leakage ring", ring_s, at(ring_s)),
@@ -89,7 +110,7 @@ fn features(trace: &Trace, findings: &Findings, cycle: Cycle, until: f64, ring_p
 
 /// Names in one row above the curve, pushed apart, each with a thin line to its place.
 fn name_features(svg: &mut Svg, axes: &Axes, features: &[Feature]) {
-    const CHARACTER: f64 = 6.9;
+    const CHARACTER: f64 = 7.9;
     let width = |name: &str| name.chars().count() as f64 * CHARACTER + 16.0;
     let places: Vec<[f64; 2]> = features.iter().map(|(_, time, volts)| axes.place(*time, *volts)).collect();
     let mut centres = Vec::new();

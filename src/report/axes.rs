@@ -89,13 +89,13 @@ impl Axes {
     /// Grid, tick labels and names; the horizontal axis is labelled only where `with_x`.
     pub(super) fn draw(&self, svg: &mut Svg, with_x: bool) {
         let (worth, _) = self.y.prefix();
-        for tick in self.y.ticks((self.height / 48.0).max(2.0) as usize) {
+        for tick in self.y.ticks((self.height / 40.0).max(3.0) as usize) {
             let [_, y] = self.place(self.x.low, tick);
             svg.line("grid", [self.left, y], [self.right(), y]);
             svg.text("tick", Anchor::End, [self.left - 7.0, y + 4.0], &number(tick / worth));
         }
         let (worth, _) = self.x.prefix();
-        for tick in self.x.ticks((self.width / 90.0).max(2.0) as usize) {
+        for tick in self.x.ticks((self.width / 70.0).max(2.0) as usize) {
             let [x, _] = self.place(tick, self.y.low);
             svg.line("grid", [x, self.top], [x, self.bottom()]);
             if with_x {

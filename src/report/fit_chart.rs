@@ -24,8 +24,8 @@ pub(super) fn draw(id: &str, trace: &Trace, fit: &RingFit) -> String {
     let mut svg = Svg::new(486.0, 446.0);
     svg.line("data", [66.0, 14.0], [90.0, 14.0]);
     svg.text("tick", Anchor::Start, [96.0, 18.0], "as captured");
-    svg.line("model", [176.0, 14.0], [200.0, 14.0]);
-    svg.text("tick", Anchor::Start, [206.0, 18.0], "fitted ring");
+    svg.line("model", [196.0, 14.0], [220.0, 14.0]);
+    svg.text("tick", Anchor::Start, [226.0, 18.0], "fitted ring");
     axes.draw(&mut svg, false);
     svg.polyline("data", &thinned(&axes, data()));
     svg.polyline("model", &thinned(&axes, model()));
@@ -37,7 +37,7 @@ pub(super) fn draw(id: &str, trace: &Trace, fit: &RingFit) -> String {
     svg.polyline("residual", &thinned(&below, residuals()));
     for level in spread {
         let [_, y] = below.place(0.0, level);
-        svg.line("level", [below.left, y], [below.right(), y]);
+        svg.line("level over", [below.left, y], [below.right(), y]);
     }
     svg.finish(id, &format!("{} and its fit", title(fit.kind)), &describe(fit))
 }

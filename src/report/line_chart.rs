@@ -10,18 +10,19 @@ use ringstep_analysis::quantity::{Measured, Unit};
 /// One series: its name and its values against line voltage.
 pub(super) type Series = (&'static str, Vec<(f64, Measured)>);
 
-/// Draws the series; `None` where there is nothing to draw. The second is drawn with open marks.
+/// Draws the series over the line voltages of the run; `None` where there is nothing to draw. The second is drawn with open marks.
 pub(super) fn draw(
     id: &str,
     name: &'static str,
     unit: Unit,
     symbol: &'static str,
+    lines: &[f64],
     series: &[Series],
 ) -> Option<String> {
     let values = || series.iter().flat_map(|(_, values)| values.iter().copied());
     values().next()?;
     let ends = values().flat_map(|(_, value)| [-1.0, 1.0].map(|side| value.value + side * half(value)));
-    let x = Axis::around(values().map(|(line_v, _)| line_v), 0.12, "line voltage, rms", "V");
+    let x = Axis::around(lines.iter().copied(), 0.12, "line voltage, rms", "V");
     let x = if x.high - x.low < 1.0 { Axis { low: x.low - 10.0, high: x.high + 10.0, ..x } } else { x };
     let y = Axis::around(ends, 0.12, name, symbol);
     let axes = Axes { left: 66.0, top: 30.0, width: 400.0, height: 230.0, x, y };

@@ -9,7 +9,7 @@ use crate::sequence::event::LoadStep;
 const WIDTH: f64 = 486.0;
 const LEFT: f64 = 66.0;
 
-/// Draws the steps in the order they were taken; `id` must be unique on the page.
+/// Draws the steps in the order given; `id` must be unique on the page.
 pub(super) fn draw(id: &str, steps: &[&LoadStep]) -> String {
     let mut svg = Svg::new(WIDTH, 330.0);
     let column = (WIDTH - LEFT - 10.0) / steps.len().max(1) as f64;
@@ -35,7 +35,7 @@ pub(super) fn draw(id: &str, steps: &[&LoadStep]) -> String {
     svg.upright_text("label", [34.0, 90.0], "visible");
     svg.upright_text("label", [18.0, 220.0], "share of");
     svg.upright_text("label", [34.0, 220.0], "cycles");
-    svg.text("label", Anchor::Middle, [(LEFT + WIDTH) / 2.0, 306.0], "load power measured at each step, in order");
+    svg.text("label", Anchor::Middle, [(LEFT + WIDTH) / 2.0, 306.0], "load power measured at each step");
     for (index, name) in ["continuous", "discontinuous", "skipped"].into_iter().enumerate() {
         let x = LEFT + 20.0 + 130.0 * index as f64;
         svg.rect(&format!("mode {name}"), [x, 314.0], [12.0, 12.0]);

@@ -8,7 +8,10 @@ use super::{
     verdict::{self, BoardWords, Key},
 };
 use crate::{
-    record::{Results, Run},
+    record::{
+        Results, Run,
+        results::{PointDoubt, PointResult, word},
+    },
     sequence::event::{Capture, Event, LoadStep, Point, Purpose},
     station::CAUTIONS,
 };
@@ -35,6 +38,8 @@ struct Page<'a> {
     points_left_out: usize,
     across_line: Vec<Figure>,
     rows: Vec<Row>,
+    loads: Vec<String>,
+    doubts: Vec<(String, Vec<DoubtGroup<'a>>)>,
     settings: Vec<Setting>,
     preflight: Vec<(&'a str, bool, &'a str)>,
     moments: Vec<Moment>,
@@ -64,6 +69,13 @@ struct Row {
 struct Cell {
     text: String,
     si: Option<Measured>,
+}
+
+/// Doubts of one kind at one point: the first, and those that say it with other figures.
+struct DoubtGroup<'a> {
+    name: String,
+    first: &'a PointDoubt,
+    others: Vec<&'a PointDoubt>,
 }
 
 /// The settings of one capture.
@@ -100,6 +112,12 @@ pub(super) fn render(run: &Run) -> Result<String, ReportError> {
         points,
         across_line: across_line(&finished),
         rows: rows(&results),
+        loads: results
+            .points
+            .iter()
+            .map(|point| format!("{}, {}", text::short(point.load_a, "A"), text::short(point.load_w, "W")))
+            .collect(),
+        doubts: results.points.iter().map(|point| (text::short(point.line_v, "V"), doubt_groups(point))).collect(),
         settings: run.captures().map(setting).collect(),
         preflight: run.events().filter_map(preflight).collect(),
         moments: timeline::moments(&run.journal),
@@ -139,14 +157,15 @@ fn waveform(run: &Run, points: &[&Point]) -> Result<Vec<Figure>, ReportError> {
         return Ok(vec![Figure { svg, caption }]);
     };
     let mut figures = Vec::new();
-    if let Some((capture, findings)) = finest(run, point) {
+    if let Some((capture, findings)) = clearest(run, point) {
         let trace = Trace::read(run, capture)?;
         if let Some(cycle) = anatomy::most_telling(findings, &trace) {
             let period_s = point.values.relaxation_frequency_hz.map(|frequency| 1.0 / frequency.value);
-            let svg = anatomy::cycle("anatomy", &trace, findings, cycle, period_s);
+            let levels = anatomy::Levels::of(&point.values, findings);
+            let svg = anatomy::cycle("anatomy", &trace, findings, levels, cycle, period_s);
             let line = text::short(point.line_v, "V");
             let caption = format!(
-                "One cycle at {line} line, capture {} ({}, {} a sample). Dashed: the levels found in it.",
+                "One cycle at {line} line, capture {} ({}, {} a sample). Dashed: the levels found.",
                 capture.number,
                 text::purpose(capture.purpose),
                 text::short(trace.interval_s, "s")
@@ -158,7 +177,8 @@ fn waveform(run: &Run, points: &[&Point]) -> Result<Vec<Figure>, ReportError> {
     if let Some((capture, findings)) = survey {
         let svg = anatomy::survey("survey", &Trace::read(run, capture)?, &findings.cycles);
         let caption = format!(
-            "The survey at the measuring load ({}), capture {}, with the mode of every cycle above it.",
+            "The survey at the measuring load ({}), capture {}, with the mode of every cycle above it \
+             (C continuous, D discontinuous, S skipped, I incomplete).",
             text::short(capture.load_a, "A"),
             capture.number
         );
@@ -175,12 +195,21 @@ fn captures_of<'a>(run: &'a Run, point: &'a Point) -> impl Iterator<Item = (&'a 
         .filter_map(|(number, findings)| Some((run.captures().find(|capture| capture.number == *number)?, findings)))
 }
 
-/// The capture with a whole demagnetisation in it that was sampled fastest.
-fn finest<'a>(run: &'a Run, point: &'a Point) -> Option<(&'a Capture, &'a Findings)> {
-    let whole = |findings: &Findings| findings.cycles.iter().any(|cycle| cycle.end_of_demagnetisation_s.is_some());
-    captures_of(run, point)
-        .filter(|(_, findings)| whole(findings))
-        .min_by(|a, b| a.0.waveform.interval_s.total_cmp(&b.0.waveform.interval_s))
+/// The capture that shows a cycle with some periods of its relaxation ring and was sampled fastest; of captures without,
+/// the fastest that holds a whole demagnetisation.
+fn clearest<'a>(run: &'a Run, point: &'a Point) -> Option<(&'a Capture, &'a Findings)> {
+    let period_s = point.values.relaxation_frequency_hz.map_or(0.0, |frequency| 1.0 / frequency.value);
+    let ringing_s = |findings: &Findings| {
+        let cycles = findings.cycles.iter();
+        cycles.filter_map(|cycle| Some(cycle.end_s - cycle.end_of_demagnetisation_s?)).fold(-1.0, f64::max)
+    };
+    captures_of(run, point).filter(|(_, findings)| ringing_s(findings) >= 0.0).min_by(
+        |(a, a_findings), (b, b_findings)| {
+            let short = |findings: &Findings| ringing_s(findings) < 5.0 * period_s;
+            let order = short(a_findings).cmp(&short(b_findings));
+            order.then(a.waveform.interval_s.total_cmp(&b.waveform.interval_s))
+        },
+    )
 }
 
 fn point_figures(run: &Run, point: &Point) -> Result<PointFigures, ReportError> {
@@ -194,13 +223,14 @@ fn point_figures(run: &Run, point: &Point) -> Result<PointFigures, ReportError> 
             figures.push(Figure { svg, caption });
         }
     }
-    let steps: Vec<&LoadStep> = run
+    let mut steps: Vec<&LoadStep> = run
         .events()
         .filter_map(|event| match event {
             Event::LoadStepped(step) if step.point == point.index => Some(step),
             _ => None,
         })
         .collect();
+    steps.sort_by(|a, b| b.load.power_w().total_cmp(&a.load.power_w()));
     if !steps.is_empty() {
         let svg = load_chart::draw(&format!("load-{}", point.index), &steps);
         let caption = "Load steps: the relaxation ring each left visible, and the modes of its cycles.".to_owned();
@@ -239,16 +269,17 @@ fn across_line(points: &[&Point]) -> Vec<Figure> {
     let series = |pick: fn(&Point) -> Option<Measured>| -> Vec<(f64, Measured)> {
         points.iter().filter_map(|point| Some((point.line_v, pick(point)?))).collect()
     };
+    let lines: Vec<f64> = points.iter().map(|point| point.line_v).collect();
     let capacitance = [
         ("probe included", series(|point| point.values.node_capacitance_f)),
         ("without the probe", series(|point| point.values.node_capacitance_without_probe_f)),
     ];
     let leakage = [("referred to the primary", series(|point| point.values.leakage_inductance_h))];
     let figures = [
-        line_chart::draw("capacitance", "node capacitance", Unit::Farad, "F", &capacitance).map(|svg| {
+        line_chart::draw("capacitance", "node capacitance", Unit::Farad, "F", &lines, &capacitance).map(|svg| {
             (svg, "Capacitance of the drain node at the bulk voltage of each line voltage, with 95 % intervals.")
         }),
-        line_chart::draw("leakage", "leakage inductance", Unit::Henry, "H", &leakage)
+        line_chart::draw("leakage", "leakage inductance", Unit::Henry, "H", &lines, &leakage)
             .map(|svg| (svg, "Leakage inductance at each line voltage, with 95 % intervals.")),
     ];
     figures.into_iter().flatten().map(|(svg, caption)| Figure { svg, caption: caption.to_owned() }).collect()
@@ -263,6 +294,17 @@ fn rows(results: &Results) -> Vec<Row> {
         Row { name, cells: results.points.iter().map(|point| cell(pick(&point.values))).collect() }
     };
     QUANTITIES.into_iter().map(row).collect()
+}
+
+fn doubt_groups(point: &PointResult) -> Vec<DoubtGroup<'_>> {
+    let mut groups: Vec<DoubtGroup<'_>> = Vec::new();
+    for doubt in &point.doubts {
+        match groups.iter_mut().find(|group| group.first.doubt.name == doubt.doubt.name) {
+            Some(group) => group.others.push(doubt),
+            None => groups.push(DoubtGroup { name: word(doubt.doubt.name), first: doubt, others: Vec::new() }),
+        }
+    }
+    groups
 }
 
 fn setting(capture: &Capture) -> Setting {

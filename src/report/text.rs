@@ -44,10 +44,8 @@ pub(super) fn with_interval(value: Measured, unit: Option<Unit>) -> String {
 pub(super) fn short(value: f64, unit: &str) -> String {
     let magnitude = value.abs();
     let prefixes = [(1e6, "M"), (1e3, "k"), (1.0, ""), (1e-3, "m"), (1e-6, "µ"), (1e-9, "n"), (1e-12, "p")];
-    let (worth, prefix) = match prefixes.into_iter().find(|(worth, _)| magnitude >= worth * 0.9999) {
-        Some(found) => found,
-        None => (1.0, ""),
-    };
+    let found = prefixes.into_iter().find(|(worth, _)| magnitude >= worth * 0.9999);
+    let (worth, prefix) = found.unwrap_or((1.0, ""));
     let scaled = value / worth;
     let decimals = if scaled.abs() >= 100.0 {
         0

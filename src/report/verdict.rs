@@ -44,7 +44,9 @@ pub(super) fn sentences(run: &Run, results: &Results, board: &BoardWords) -> Vec
         None => "The run was cut short: its record has no end",
     };
     let mut sentences = vec![format!("{ended}: {measured} measured, {refused} refused.")];
-    sentences.extend(results.message.clone());
+    if results.outcome != Some(Outcome::Partial) {
+        sentences.extend(results.message.clone());
+    }
     match (highest_peak(results), board.drain_rating_v) {
         (Some((point, peak)), Some(rating_v)) => sentences.push(margin(point, peak, rating_v)),
         (Some(_), None) => sentences.push("The board file states no drain rating that could be read.".to_owned()),
