@@ -5,6 +5,7 @@ mod by_hand;
 mod cli;
 mod drivers;
 mod files;
+mod fit;
 mod instruments;
 mod invented;
 mod layering;
