@@ -6,6 +6,7 @@ mod cli;
 mod dialects;
 mod drivers;
 mod files;
+mod fit;
 mod instruments;
 mod invented;
 mod layering;

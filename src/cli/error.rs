@@ -59,6 +59,14 @@ pub(crate) enum CliError {
         /// Why.
         source: io::Error,
     },
+    /// A recording that gives no samples.
+    #[error("failed to read samples from {path}: {message}")]
+    Recording {
+        /// The file.
+        path: String,
+        /// Why, with line and column where they can be told.
+        message: String,
+    },
     /// Something the system refused.
     #[error("{0}")]
     Failed(String),
@@ -90,7 +98,7 @@ impl CliError {
                 Exit::Failed
             }
             Self::Preflight(_) => Exit::Refused,
-            Self::Usage(_) | Self::Mistakes(_) => Exit::Usage,
+            Self::Recording { .. } | Self::Usage(_) | Self::Mistakes(_) => Exit::Usage,
         }
     }
 
@@ -106,6 +114,7 @@ impl CliError {
             Self::Preflight(_) => {
                 Some("change what is named above, on the bench or in the three files; `check` shows every check")
             }
+            Self::Recording { .. } => Some("fit --help shows the options that say what the file does not"),
             Self::Usage(_) => Some("--help shows what each option takes"),
             Self::Mistakes(_) => Some("commented examples stand in src/guide/examples, drivers in the folder drivers"),
         }

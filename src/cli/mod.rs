@@ -6,11 +6,14 @@ mod demo;
 mod demo_files;
 mod drivers;
 mod error;
+mod findings;
+mod fit;
 mod inputs;
 mod keeping;
 mod measure;
 mod operator;
 mod output;
+mod recording;
 mod simulate;
 mod table;
 mod truth;
@@ -42,6 +45,7 @@ enum Command {
     Demo(demo::Demo),
     Check(check::Check),
     Measure(measure::Measure),
+    Fit(fit::Fit),
     Drivers(drivers::DriversCommand),
     Simulate(simulate::Simulate),
 }
@@ -52,6 +56,7 @@ impl Command {
             Self::Demo(demo) => demo.run(),
             Self::Check(check) => check.run(),
             Self::Measure(measure) => measure.run(),
+            Self::Fit(fit) => fit.run(),
             Self::Drivers(drivers) => drivers.run(),
             Self::Simulate(simulate) => simulate.run(),
         }
@@ -63,6 +68,7 @@ impl Command {
             Self::Demo(demo) => demo.json,
             Self::Check(check) => check.json,
             Self::Measure(measure) => measure.json,
+            Self::Fit(fit) => fit.json,
             Self::Drivers(_) | Self::Simulate(_) => false,
         }
     }
