@@ -9,6 +9,7 @@
 pub mod files;
 pub mod instrument;
 pub mod record;
+pub mod report;
 pub mod scpi;
 pub mod sequence;
 pub mod station;

@@ -1,7 +1,9 @@
 //! Integration tests: one module a subject.
 #![allow(clippy::unwrap_used, missing_docs)]
 
+mod by_hand;
 mod cli;
+mod drivers;
 mod files;
 mod instruments;
 mod invented;
@@ -10,3 +12,7 @@ mod need;
 mod netlists;
 mod preflight;
 mod record;
+mod report;
+mod safe_off;
+mod scpi;
+mod transport;

@@ -28,7 +28,7 @@ pub enum Subject {
 }
 
 /// Everything one analysis found. Quantities are SI with the unit in the name.
-#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[derive(Debug, Clone, Default, PartialEq, Serialize, Deserialize)]
 pub struct Findings {
     /// Relaxation ring, combined over the rings of the record (in `RingDown`, the one ring).
     pub relaxation_ring: Option<Ring>,

@@ -7,7 +7,10 @@
 
 pub mod circuit;
 pub mod cycles;
+mod entry;
 pub mod findings;
 pub mod fit;
 pub mod quantity;
 pub mod waveform;
+
+pub use entry::analyse;

@@ -32,7 +32,7 @@ pub(crate) struct Check {
 impl Check {
     /// Runs the command.
     pub(crate) fn run(&self) -> Result<Exit, CliError> {
-        let Inputs { plan, station, board } = self.paths.read()?;
+        let Inputs { plan, station, board, .. } = self.paths.read()?;
         let attendance = if self.unattended { Attendance::Unattended } else { Attendance::Attended };
         let checks = preflight(&station, &board, &plan, attendance);
         let passed = checks.iter().all(|check| check.passed);

@@ -7,7 +7,7 @@ use super::{
 };
 use clap::{Args, Subcommand};
 use ringstep::instrument::{Drivers, DriversError, check_driver};
-use std::path::PathBuf;
+use std::path::{Path, PathBuf};
 
 /// List drivers, or check a driver file.
 #[derive(Debug, Args)]
@@ -36,11 +36,7 @@ impl DriversCommand {
     pub(crate) fn run(&self) -> Result<Exit, CliError> {
         match &self.action {
             Action::List { folder } => {
-                let drivers = match folder {
-                    Some(folder) => Drivers::with_folder(folder),
-                    None => Drivers::embedded(),
-                };
-                output::line(&listed(&drivers.map_err(as_cli_error)?));
+                output::line(&listed(&known(folder.as_deref())?));
             }
             Action::Check { file } => {
                 let path = file.to_string_lossy();
@@ -51,6 +47,15 @@ impl DriversCommand {
         }
         Ok(Exit::Done)
     }
+}
+
+/// The drivers that are built in, and those of a folder before them.
+pub(super) fn known(folder: Option<&Path>) -> Result<Drivers, CliError> {
+    let drivers = match folder {
+        Some(folder) => Drivers::with_folder(folder),
+        None => Drivers::embedded(),
+    };
+    drivers.map_err(as_cli_error)
 }
 
 fn listed(drivers: &Drivers) -> String {

@@ -1,6 +1,6 @@
 //! How a command ends: kinds of failure with an exit code and a hint each.
 
-use ringstep::files::FileErrors;
+use ringstep::{files::FileErrors, record::RecordError, report::ReportError, sequence::RunError};
 use serde_json::{Value, json};
 use std::{io, process::ExitCode};
 
@@ -24,8 +24,14 @@ pub(crate) enum Exit {
     Failed,
     /// Wrong usage, or a mistake in a file.
     Usage,
+    /// Analysed, and nothing in it could be measured.
+    NothingMeasurable,
     /// Preflight refused.
     Refused,
+    /// An instrument failed, or the run with it.
+    Instrument,
+    /// The operator stopped the run.
+    Stopped,
 }
 
 impl From<Exit> for ExitCode {
@@ -34,7 +40,10 @@ impl From<Exit> for ExitCode {
             Exit::Done => 0,
             Exit::Failed => 1,
             Exit::Usage => 2,
+            Exit::NothingMeasurable => 3,
             Exit::Refused => 4,
+            Exit::Instrument => 5,
+            Exit::Stopped => 130,
         })
     }
 }
@@ -59,13 +68,28 @@ pub(crate) enum CliError {
     /// Mistakes in files the user wrote; of every file at once.
     #[error("{}", joined(.0))]
     Mistakes(Vec<FileErrors>),
+    /// Checks that did not pass before power.
+    #[error("refused by the preflight, nothing was energised:\n  {}", .0.join("\n  "))]
+    Preflight(Vec<String>),
+    /// The run folder.
+    #[error(transparent)]
+    Record(#[from] RecordError),
+    /// The report.
+    #[error(transparent)]
+    Report(#[from] ReportError),
+    /// The run could not be kept; safe-off was reached first.
+    #[error(transparent)]
+    Run(#[from] RunError),
 }
 
 impl CliError {
     /// The exit code of this kind.
     pub(crate) fn exit(&self) -> Exit {
         match self {
-            Self::Unreadable { .. } | Self::Failed(_) => Exit::Failed,
+            Self::Unreadable { .. } | Self::Failed(_) | Self::Record(_) | Self::Report(_) | Self::Run(_) => {
+                Exit::Failed
+            }
+            Self::Preflight(_) => Exit::Refused,
             Self::Usage(_) | Self::Mistakes(_) => Exit::Usage,
         }
     }
@@ -78,7 +102,10 @@ impl CliError {
                 io::ErrorKind::InvalidData => Some("the file must be text in UTF-8"),
                 _ => None,
             },
-            Self::Failed(_) => None,
+            Self::Failed(_) | Self::Record(_) | Self::Report(_) | Self::Run(_) => None,
+            Self::Preflight(_) => {
+                Some("change what is named above, on the bench or in the three files; `check` shows every check")
+            }
             Self::Usage(_) => Some("--help shows what each option takes"),
             Self::Mistakes(_) => Some("commented examples stand in src/guide/examples, drivers in the folder drivers"),
         }

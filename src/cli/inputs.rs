@@ -4,6 +4,7 @@ use super::error::CliError;
 use clap::Args;
 use ringstep::{
     files::FileErrors,
+    record,
     sequence::Plan,
     station::{Board, Station},
 };
@@ -35,20 +36,24 @@ pub(crate) struct Inputs {
     pub(crate) station: Station,
     /// Board.
     pub(crate) board: Board,
+    /// The three texts as they stand in the files.
+    pub(crate) texts: record::Inputs,
 }
 
 impl InputPaths {
     /// Reads all three.
     pub(crate) fn read(&self) -> Result<Inputs, CliError> {
-        let plan = read_text(&self.plan)?;
-        let station = read_text(&self.station)?;
-        let board = read_text(&self.board)?;
+        let texts = record::Inputs {
+            plan: read_text(&self.plan)?,
+            station: read_text(&self.station)?,
+            board: read_text(&self.board)?,
+        };
         let mut mistakes = Vec::new();
-        let plan = kept(Plan::read(&self.plan.to_string_lossy(), &plan), &mut mistakes);
-        let station = kept(Station::read(&self.station.to_string_lossy(), &station), &mut mistakes);
-        let board = kept(Board::read(&self.board.to_string_lossy(), &board), &mut mistakes);
+        let plan = kept(Plan::read(&self.plan.to_string_lossy(), &texts.plan), &mut mistakes);
+        let station = kept(Station::read(&self.station.to_string_lossy(), &texts.station), &mut mistakes);
+        let board = kept(Board::read(&self.board.to_string_lossy(), &texts.board), &mut mistakes);
         match (plan, station, board) {
-            (Some(plan), Some(station), Some(board)) => Ok(Inputs { plan, station, board }),
+            (Some(plan), Some(station), Some(board)) => Ok(Inputs { plan, station, board, texts }),
             _ => Err(CliError::Mistakes(mistakes)),
         }
     }

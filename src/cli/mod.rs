@@ -1,11 +1,19 @@
 //! The command line: one command a file, and the way from arguments to an exit code.
 
+mod bench_process;
 mod check;
+mod demo;
+mod demo_files;
 mod drivers;
 mod error;
 mod inputs;
+mod keeping;
+mod measure;
+mod operator;
 mod output;
 mod simulate;
+mod table;
+mod truth;
 
 use clap::{ArgAction, Parser, Subcommand};
 use error::{CliError, Exit};
@@ -31,7 +39,9 @@ struct Arguments {
 
 #[derive(Debug, Subcommand)]
 enum Command {
+    Demo(demo::Demo),
     Check(check::Check),
+    Measure(measure::Measure),
     Drivers(drivers::DriversCommand),
     Simulate(simulate::Simulate),
 }
@@ -39,7 +49,9 @@ enum Command {
 impl Command {
     fn run(&self) -> Result<Exit, CliError> {
         match self {
+            Self::Demo(demo) => demo.run(),
             Self::Check(check) => check.run(),
+            Self::Measure(measure) => measure.run(),
             Self::Drivers(drivers) => drivers.run(),
             Self::Simulate(simulate) => simulate.run(),
         }
@@ -48,7 +60,9 @@ impl Command {
     /// Whether the command answers in JSON, its errors included.
     fn json(&self) -> bool {
         match self {
+            Self::Demo(demo) => demo.json,
             Self::Check(check) => check.json,
+            Self::Measure(measure) => measure.json,
             Self::Drivers(_) | Self::Simulate(_) => false,
         }
     }

@@ -1,8 +1,9 @@
 //! Speaks one instrument's dialect: fills templates, reads every setting back, and asks for errors after each step.
 
 use super::{Definition, Identity, InstrumentError, InstrumentErrorKind as Kind};
-use crate::scpi::{Session, response};
+use crate::scpi::{ScpiError, ScpiErrorKind, Session, response};
 use std::{sync::Arc, time::Duration};
+use tokio::time::{Instant, sleep, timeout};
 
 /// An instrument reached through its session by the templates of its driver.
 #[derive(Clone)]
@@ -119,12 +120,32 @@ impl Dialect {
 
     /// Asks for a text.
     pub(super) async fn text(&self, key: &str, channel: Option<u8>) -> Result<String, InstrumentError> {
-        Ok(self.session.query(&self.filled(key, Part::Get, channel, "")?).await?)
+        let question = self.filled(key, Part::Get, channel, "")?;
+        let answer = self.session.query(&question).await;
+        self.explained(&question, answer).await
     }
 
     /// Asks for a block.
     pub(super) async fn block(&self, key: &str) -> Result<Vec<u8>, InstrumentError> {
-        Ok(self.session.query_block(&self.filled(key, Part::Get, None, "")?).await?)
+        let question = self.filled(key, Part::Get, None, "")?;
+        let answer = self.session.query_block(&question).await;
+        self.explained(&question, answer).await
+    }
+
+    /// An instrument that refuses a question stays silent and says why in its error queue.
+    async fn explained<T>(&self, question: &str, answer: Result<T, Box<ScpiError>>) -> Result<T, InstrumentError> {
+        match answer {
+            Ok(answer) => Ok(answer),
+            Err(error) => {
+                if error.kind == ScpiErrorKind::NoAnswer
+                    && let Err(reported) = self.no_errors(question).await
+                    && reported.kind == Kind::Reported
+                {
+                    return Err(InstrumentError { source: Some(error), ..reported });
+                }
+                Err(error.into())
+            }
+        }
     }
 
     /// Refuses to go on where the instrument has put anything into its error queue.
@@ -197,23 +218,26 @@ impl OffSwitch {
 
     /// Switches off and confirms it by reading back; ends within [`OffSwitch::LIVE`] + [`OffSwitch::FRESH`].
     pub async fn off(&self) -> Result<(), InstrumentError> {
-        if let Ok(Ok(())) = tokio::time::timeout(Self::LIVE, self.confirm(&self.dialect)).await {
+        if let Ok(Ok(())) = timeout(Self::LIVE, self.confirm(&self.dialect)).await {
             return Ok(());
         }
         // Whatever exchange is under way would only be in the way of the fresh link.
         self.dialect.session.abandon();
-        match tokio::time::timeout(Self::FRESH, self.over_fresh_link()).await {
+        match timeout(Self::FRESH, self.over_fresh_link()).await {
             Ok(result) => result,
             Err(_) => Err(self.dialect.error(Kind::Unexpected, "switching off was not confirmed in time")),
         }
     }
 
     async fn over_fresh_link(&self) -> Result<(), InstrumentError> {
+        const PAUSE: Duration = Duration::from_millis(20);
+        let give_up = Instant::now() + Self::FRESH - 2 * PAUSE;
         let session = loop {
-            match self.dialect.session.fresh(Self::FRESH).await {
+            match self.dialect.session.fresh(Self::FRESH - 2 * PAUSE).await {
                 Ok(session) => break session,
+                Err(error) if Instant::now() >= give_up => return Err(error.into()),
                 // The old link may need a moment to let go of the line.
-                Err(_) => tokio::time::sleep(Duration::from_millis(20)).await,
+                Err(_) => sleep(PAUSE).await,
             }
         };
         self.confirm(&Dialect { session, ..self.dialect.clone() }).await

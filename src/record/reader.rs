@@ -120,6 +120,16 @@ impl Run {
         capture_file::decode(file).map_err(|reason| RecordError::broken(self.folder.join(capture_name(number)), reason))
     }
 
+    /// A capture in volts at the probe tip, by the scale it was sent with.
+    pub fn read_volts(&self, number: usize) -> Result<Vec<f64>, RecordError> {
+        let waveform = self.read_capture(number)?;
+        let codes = capture_file::codes(&waveform)
+            .map_err(|reason| RecordError::broken(self.folder.join(capture_name(number)), reason))?;
+        let volts =
+            |code| (f64::from(code) - waveform.code_reference) * waveform.volts_per_code + waveform.volts_origin;
+        Ok(codes.into_iter().map(volts).collect())
+    }
+
     /// Adds a finished file, or replaces a derived one, and notes its checksum in the manifest.
     pub fn keep(&mut self, name: &str, bytes: &[u8]) -> Result<(), RecordError> {
         if !DERIVED.contains(&name) {

@@ -23,9 +23,6 @@ pub struct BlockHeader {
     pub length: usize,
 }
 
-/// Longest payload that is believed; more would be a damaged header, not a capture.
-pub const LONGEST_BLOCK: usize = 1 << 30;
-
 /// Parses the header of a block. `#0` (indefinite length) is refused: it ends with a signal that streams don't carry.
 pub fn parse_header(bytes: &[u8]) -> Parsed<BlockHeader> {
     match bytes.first() {
@@ -50,10 +47,9 @@ pub fn parse_header(bytes: &[u8]) -> Parsed<BlockHeader> {
     if written.len() < digits {
         return Parsed::Incomplete;
     }
-    // At most nine digits: it fits.
+    // At most nine digits, which bounds it to a gigabyte.
     let length = written.iter().fold(0, |length, digit| length * 10 + usize::from(digit - b'0'));
     Parsed::Complete { value: BlockHeader { length }, used: 2 + digits }
-        .filter(|header| header.length <= LONGEST_BLOCK, "the block is longer than any capture")
 }
 
 /// Parses a whole block; the payload is the value. A newline that some instruments append is not part of it.
@@ -65,14 +61,5 @@ pub fn parse_block(bytes: &[u8]) -> Parsed<&[u8]> {
         },
         Parsed::Incomplete => Parsed::Incomplete,
         Parsed::Malformed(reason) => Parsed::Malformed(reason),
-    }
-}
-
-impl<T> Parsed<T> {
-    fn filter(self, holds: impl FnOnce(&T) -> bool, reason: &str) -> Self {
-        match self {
-            Self::Complete { ref value, .. } if !holds(value) => Self::Malformed(reason.to_owned()),
-            other => other,
-        }
     }
 }

@@ -3,6 +3,7 @@
 
 pub mod block;
 mod error;
+mod in_step;
 mod owner;
 pub mod response;
 mod session;

@@ -1,5 +1,5 @@
-//! The task that owns one instrument's link: carries exchanges to their end, brings the link back in step after a missed
-//! deadline, opens it again after a loss.
+//! The task that owns one instrument's link: carries exchanges to their end, and opens the link again after a loss. How it
+//! stays in step with its instrument is in `in_step`.
 
 use super::{
     ScpiErrorKind, SessionOptions,
@@ -40,25 +40,21 @@ pub(super) struct Request {
     pub(super) reply: oneshot::Sender<Result<Reply, Failure>>,
 }
 
-/// Silence after which nothing more of an old answer is expected to be under way.
-const QUIET: Duration = Duration::from_millis(50);
-/// The same where the marker's answer can't be told from an older one.
-const LONG_QUIET: Duration = Duration::from_millis(300);
 const FIRST_PAUSE: Duration = Duration::from_millis(20);
 const LONGEST_PAUSE: Duration = Duration::from_secs(1);
-const IDENTITY: &str = "*IDN?";
-const COMPLETION: &str = "*OPC?";
-
+pub(super) const IDENTITY: &str = "*IDN?";
 pub(super) struct Owner {
     link: Option<Box<dyn Link>>,
     opener: Arc<dyn Opener>,
     options: Arc<SessionOptions>,
     log: ExchangeLog,
-    buffer: Vec<u8>,
+    pub(super) buffer: Vec<u8>,
     /// Questions whose answers may still come.
-    outstanding: Vec<String>,
-    out_of_step: bool,
-    identity: Option<String>,
+    pub(super) outstanding: Vec<String>,
+    pub(super) out_of_step: bool,
+    pub(super) identity: Option<String>,
+    /// The last marker that was written.
+    pub(super) marks: u8,
 }
 
 impl Owner {
@@ -69,7 +65,17 @@ impl Owner {
         log: ExchangeLog,
     ) -> Self {
         let (buffer, outstanding) = (Vec::new(), Vec::new());
-        Self { link: Some(link), opener, options, log, buffer, outstanding, out_of_step: false, identity: None }
+        Self {
+            link: Some(link),
+            opener,
+            options,
+            log,
+            buffer,
+            outstanding,
+            out_of_step: false,
+            identity: None,
+            marks: 0,
+        }
     }
 
     pub(super) async fn run(mut self, mut requests: mpsc::Receiver<Request>, abandon: Arc<Notify>) {
@@ -150,14 +156,14 @@ impl Owner {
         }
     }
 
-    async fn send(&mut self, command: &str, deadline: Instant) -> Result<(), Failure> {
+    pub(super) async fn send(&mut self, command: &str, deadline: Instant) -> Result<(), Failure> {
         self.log.message(&self.options.name, Direction::Sent, command.as_bytes());
         let message = format!("{command}{}", self.options.terminator);
         self.link()?.write(message.as_bytes(), deadline).await.map_err(Failure::from)
     }
 
     /// The next line that is not empty: an empty one is the newline that followed a block.
-    async fn read_line(&mut self, deadline: Instant) -> Result<String, Failure> {
+    pub(super) async fn read_line(&mut self, deadline: Instant) -> Result<String, Failure> {
         loop {
             match parse_line(&self.buffer) {
                 Parsed::Complete { value: [], used } => drop(self.buffer.drain(..used)),
@@ -208,7 +214,7 @@ impl Owner {
     }
 
     /// Waits for some bytes; whether the wire signalled the end of the message.
-    async fn receive(&mut self, deadline: Instant) -> Result<bool, Failure> {
+    pub(super) async fn receive(&mut self, deadline: Instant) -> Result<bool, Failure> {
         let link = self.link.as_mut().ok_or_else(|| Failure::new(ScpiErrorKind::Lost))?;
         match link.read(deadline).await {
             Ok(chunk) => {
@@ -221,84 +227,6 @@ impl Owner {
             }
             Err(error) => Err(error.into()),
         }
-    }
-
-    /// Before a question: nothing of an earlier answer may be left or under way.
-    async fn come_into_step(&mut self, patience: Duration) -> Result<(), Failure> {
-        let arrived = self.link()?.take_arrived().await;
-        match arrived {
-            Ok(arrived) => self.buffer.extend(arrived),
-            Err(error) => {
-                self.forget_link();
-                return Err(error.into());
-            }
-        }
-        if !self.out_of_step && self.buffer.iter().all(|byte| matches!(byte, b'\r' | b'\n')) {
-            self.buffer.clear();
-            return Ok(());
-        }
-        self.out_of_step = true;
-        match self.resynchronise(Instant::now() + patience.max(4 * QUIET)).await {
-            Err(failure) if failure.kind == ScpiErrorKind::Lost => {
-                self.forget_link();
-                Err(failure)
-            }
-            Err(failure) => Err(Failure { kind: ScpiErrorKind::OutOfStep, ..failure }),
-            Ok(()) => {
-                self.out_of_step = false;
-                self.outstanding.clear();
-                Ok(())
-            }
-        }
-    }
-
-    /// Waits for quiet, then asks a marker and drops everything before its answer. Instruments answer in order: what comes
-    /// after the marker's answer is new.
-    async fn resynchronise(&mut self, deadline: Instant) -> Result<(), Failure> {
-        self.drop_until_quiet(QUIET, deadline).await?;
-        let waiting = |marker: &str| self.outstanding.iter().filter(|asked| asked.as_str() == marker).count();
-        let marker = if waiting(IDENTITY) > waiting(COMPLETION) { COMPLETION } else { IDENTITY };
-        let older = waiting(marker);
-        self.outstanding.push(marker.to_owned());
-        self.send(marker, deadline).await?;
-        loop {
-            match self.read_line(deadline).await {
-                Ok(line) if self.answers(marker, &line) => break,
-                Ok(_) => {}
-                Err(failure) if failure.kind == ScpiErrorKind::Garbled => self.buffer.clear(),
-                Err(failure) => return Err(failure),
-            }
-        }
-        // An older question of the same wording can't be told from the marker: its answer may have been this one.
-        self.drop_until_quiet(if older > 0 { LONG_QUIET } else { Duration::ZERO }, deadline).await?;
-        self.note("in step again");
-        Ok(())
-    }
-
-    fn answers(&self, marker: &str, line: &str) -> bool {
-        match (marker, &self.identity) {
-            (COMPLETION, _) => integer(line) == Ok(1),
-            (_, Some(identity)) => line == identity,
-            (_, None) => line.matches(',').count() >= 3,
-        }
-    }
-
-    async fn drop_until_quiet(&mut self, quiet: Duration, deadline: Instant) -> Result<(), Failure> {
-        let mut dropped = std::mem::take(&mut self.buffer).len();
-        while !quiet.is_zero() {
-            match self.receive((Instant::now() + quiet).min(deadline)).await {
-                Err(failure) if failure.kind == ScpiErrorKind::NoAnswer => break,
-                Err(failure) => return Err(failure),
-                Ok(_) => dropped += std::mem::take(&mut self.buffer).len(),
-            }
-            if Instant::now() >= deadline {
-                return Err(Failure::new(ScpiErrorKind::OutOfStep));
-            }
-        }
-        if dropped > 0 {
-            self.note(&format!("dropped {dropped} bytes that belong to no question"));
-        }
-        Ok(())
     }
 
     async fn reconnect(&mut self, deadline: Instant) -> Result<(), Failure> {
@@ -327,7 +255,7 @@ impl Owner {
             source: Some(error),
         })?);
         // On a serial line the rest of an old answer may still be coming.
-        self.drop_until_quiet(QUIET, attempt).await?;
+        self.drop_until_quiet(attempt).await?;
         self.send(IDENTITY, attempt).await?;
         let line = self.read_line(attempt).await?;
         match &self.identity {
@@ -342,26 +270,26 @@ impl Owner {
         }
     }
 
-    fn link(&mut self) -> Result<&mut Box<dyn Link>, Failure> {
+    pub(super) fn link(&mut self) -> Result<&mut Box<dyn Link>, Failure> {
         self.link.as_mut().ok_or_else(|| Failure::new(ScpiErrorKind::Lost))
     }
 
     async fn lose(&mut self, why: &str) {
         if let Some(mut link) = self.link.take() {
-            let _ = tokio::time::timeout(QUIET, link.close()).await;
+            let _ = tokio::time::timeout(FIRST_PAUSE, link.close()).await;
             self.note(why);
         }
         self.forget_link();
     }
 
-    fn forget_link(&mut self) {
+    pub(super) fn forget_link(&mut self) {
         self.link = None;
         self.buffer.clear();
         self.outstanding.clear();
         self.out_of_step = false;
     }
 
-    fn note(&self, text: &str) {
+    pub(super) fn note(&self, text: &str) {
         self.log.message(&self.options.name, Direction::Noted, text.as_bytes());
     }
 }

@@ -123,7 +123,7 @@ pub fn error_entry(line: &str) -> Option<ErrorEntry> {
     };
     let code = i32::try_from(integer(code).ok()?).ok()?;
     let message = match quoted(message) {
-        Some((message, rest)) if rest.is_empty() => message,
+        Some((message, "")) => message,
         Some(_) => return None,
         None if message.starts_with('"') => return None,
         None => message.to_owned(),

@@ -2,7 +2,7 @@
 //! standard output; it ends with its standard input.
 
 use crate::{
-    boards,
+    boards::{self, ClampKind, ControllerKind, Nominal},
     faults::{Fault, FaultPlan, InstrumentName},
     instruments::{
         Device, Instrument, SharedBench,
@@ -116,6 +116,10 @@ pub struct Announcement {
     pub probe_factor: f64,
     /// Nominal capacitance of the drain probe; the real one is within 3 %.
     pub probe_capacitance_f: f64,
+    /// What the documents of the board state.
+    pub documents: Nominal,
+    /// Primary self-inductance of this very sample as an inductance meter shows it, within 0.5 %.
+    pub primary_inductance_reading_h: f64,
 }
 
 /// A started bench; it ends when this is dropped.
@@ -130,6 +134,27 @@ impl Drop for RunningBench {
     fn drop(&mut self) {
         self.bench.now().truth().final_state();
     }
+}
+
+/// Every board by name, with a sentence about it.
+pub fn boards() -> Vec<(&'static str, String)> {
+    boards::all().iter().map(|board| (board.name, sentence(&board.nominal))).collect()
+}
+
+fn sentence(nominal: &Nominal) -> String {
+    let [lowest_v, highest_v] = nominal.line_range_v;
+    let clamp = match nominal.clamp {
+        ClampKind::ResistorCapacitorDiode => "a resistor-capacitor-diode clamp",
+        ClampKind::Zener => "a zener clamp",
+    };
+    let controller = match nominal.controller {
+        ControllerKind::CycleSkipping => "leaves out cycles at light load",
+        ControllerKind::FrequencyFoldback => "lowers its frequency at light load",
+    };
+    format!(
+        "{} V, {} A from {lowest_v} V to {highest_v} V; has {clamp} and {controller}.",
+        nominal.output_v, nominal.maximum_load_a
+    )
 }
 
 fn positive(what: &'static str, value: f64) -> Result<f64, BenchError> {
@@ -151,6 +176,14 @@ fn probe(options: &Options) -> Result<Probe, BenchError> {
         offset_v: 0.005 * options.probe_factor * off(1),
         miscompensation: 0.01 * off(2),
     })
+}
+
+/// Primary self-inductance of the sample through a meter that is off by up to 0.5 %.
+fn inductance_reading(bench: &SharedBench, seed: u64) -> f64 {
+    let bench = bench.now();
+    let circuit = bench.plant().circuit();
+    let primary_h = circuit.parts.magnetising_h + circuit.parts.leakage_h;
+    primary_h * (1.0 + 0.005 * quirk(seed, "inductance meter", 0))
 }
 
 /// Starts a bench within this process.
@@ -187,6 +220,8 @@ pub async fn start(options: &Options) -> Result<RunningBench, BenchError> {
         source: source.address().map_err(failed("name the source's socket"))?,
         probe_factor: options.probe_factor,
         probe_capacitance_f: options.probe_capacitance_f,
+        documents: board.nominal,
+        primary_inductance_reading_h: inductance_reading(&bench, seed),
     };
     bench.now().note_state();
     let mut tasks = JoinSet::new();

@@ -40,14 +40,8 @@ impl TruthFile {
         }
     }
 
-    /// Notes what an acquisition holds.
-    pub fn acquisition(&mut self, serial_number: &str, number: u64, settings: Value, window: Value, truth: Value) {
-        if self.file.is_none() {
-            return;
-        }
-        let mut line = json!({
-            "simulated": true, "serial": serial_number, "number": number, "settings": settings, "window": window,
-        });
+    /// Notes an acquisition: what it was taken with, then what it holds.
+    pub fn acquisition(&mut self, mut line: Value, truth: Value) {
         if let (Value::Object(line), Value::Object(truth)) = (&mut line, truth) {
             line.extend(truth);
         }

@@ -48,7 +48,7 @@ pub async fn connect(
         dialect(RoleKind::Source, &station.source, drivers, log),
     );
     let scope = match scope? {
-        Filled::Instrument(dialect) => Box::new(DialectScope::new(dialect)?),
+        Filled::Instrument(dialect) => Box::new(DialectScope::new(*dialect)?),
         Filled::ByHand(what) => {
             let detail = format!("a scope can't be read by hand (`{what}`)");
             return Err(by_hand_error(RoleKind::Scope, Kind::NoDriver, detail));
@@ -60,7 +60,7 @@ pub async fn connect(
     };
     let (load, load_off): (Box<dyn Load>, Option<OffSwitch>) = match load? {
         Filled::Instrument(dialect) => {
-            let load = DialectLoad::new(dialect)?;
+            let load = DialectLoad::new(*dialect)?;
             let switch = load.off_switch();
             (Box::new(load), Some(switch))
         }
@@ -68,7 +68,7 @@ pub async fn connect(
     };
     let (source, source_off): (Box<dyn Source>, Option<OffSwitch>) = match source? {
         Filled::Instrument(dialect) => {
-            let source = DialectSource::new(dialect)?;
+            let source = DialectSource::new(*dialect)?;
             let switch = source.off_switch();
             (Box::new(source), Some(switch))
         }
@@ -78,7 +78,7 @@ pub async fn connect(
 }
 
 enum Filled {
-    Instrument(Dialect),
+    Instrument(Box<Dialect>),
     ByHand(String),
 }
 
@@ -90,9 +90,9 @@ async fn dialect(
 ) -> Result<Filled, InstrumentError> {
     match filled {
         Role::ByHand { description } => Ok(Filled::ByHand(description.clone())),
-        Role::Instrument { address, driver } => {
-            open_dialect(role, address, driver.as_deref(), drivers, log).await.map(Filled::Instrument)
-        }
+        Role::Instrument { address, driver } => open_dialect(role, address, driver.as_deref(), drivers, log)
+            .await
+            .map(|dialect| Filled::Instrument(Box::new(dialect))),
     }
 }
 

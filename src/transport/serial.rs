@@ -72,6 +72,8 @@ pub(super) fn open(device: &str, options: &SerialOptions) -> Result<Box<dyn Link
 fn refused(device: &str, error: tokio_serial::Error) -> LinkError {
     let doing = format!("open {device}: {error}");
     let kind = match error.kind() {
+        // The same kind stands for a line that another program holds.
+        tokio_serial::ErrorKind::NoDevice if std::path::Path::new(device).exists() => LinkErrorKind::Denied,
         tokio_serial::ErrorKind::NoDevice => LinkErrorKind::NotFound,
         tokio_serial::ErrorKind::Io(kind) => LinkError::system("", kind.into()).kind,
         _ => LinkErrorKind::Failed,

@@ -6,9 +6,11 @@ mod parts;
 
 pub use harbour::{all, by_name};
 pub use parts::{Clamp, ClampLevel, ControllerParts, Diode, LightLoad, Parts};
+use serde::Serialize;
 
 /// Kind of clamp on the drain.
-#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
+#[serde(rename_all = "kebab-case")]
 pub enum ClampKind {
     /// Resistor, capacitor and diode to the bulk.
     ResistorCapacitorDiode,
@@ -17,7 +19,8 @@ pub enum ClampKind {
 }
 
 /// Kind of controller.
-#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
+#[serde(rename_all = "kebab-case")]
 pub enum ControllerKind {
     /// Fixed clock, leaves out cycles at light load.
     CycleSkipping,
@@ -26,7 +29,7 @@ pub enum ControllerKind {
 }
 
 /// What the documents of a board state; nominal values, before tolerances.
-#[derive(Debug, Clone, Copy, PartialEq)]
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
 pub struct Nominal {
     /// Primary self-inductance.
     pub primary_inductance_h: f64,

@@ -35,6 +35,8 @@ pub(super) struct Slow {
 pub(super) struct Orbit {
     /// The state at equal steps of half a line period.
     pub(super) states: Vec<Slow>,
+    /// Whether the source limits its current somewhere on the way.
+    pub(super) limiting: bool,
     /// Root-mean-square line current.
     pub(super) line_rms_a: f64,
     /// Line power.
@@ -164,13 +166,14 @@ impl Average<'_> {
         let mut last_v = f64::INFINITY;
         for _ in 0..200 {
             let mut states = Vec::with_capacity(ORBIT_STEPS);
-            let (mut square, mut energy_j) = (0.0, 0.0);
+            let (mut square, mut energy_j, mut limiting) = (0.0, 0.0, false);
             for index in 0..ORBIT_STEPS {
                 states.push(slow);
                 let at = Line { phase: 0.0, ..*line };
                 let line_v = at.voltage(index as f64 * h);
                 let drive = Drive { line_v, ..*drive };
                 let line_a = self.advance(&mut slow, &drive, h);
+                limiting |= line_a > 0.0 && line_a >= line.limit_a;
                 square += line_a * line_a;
                 energy_j += line_a * line_v.unwrap_or(0.0) * h;
             }
@@ -179,7 +182,7 @@ impl Average<'_> {
             }
             if (slow.bulk_v - last_v).abs() < 1e-4 {
                 let line_rms_a = (square / ORBIT_STEPS as f64).sqrt();
-                return Some(Orbit { states, line_rms_a, line_w: energy_j * 2.0 * line.frequency_hz });
+                return Some(Orbit { states, limiting, line_rms_a, line_w: energy_j * 2.0 * line.frequency_hz });
             }
             last_v = slow.bulk_v;
         }

@@ -28,6 +28,7 @@ pub struct State {
 
 impl State {
     /// `self + h * rate`.
+    #[inline(always)]
     pub fn plus(&self, h: f64, rate: &State) -> State {
         State {
             drain_v: self.drain_v + h * rate.drain_v,
@@ -110,6 +111,7 @@ pub struct Circuit {
 
 impl Circuit {
     /// Loss current of the core; its conductance grows with amplitude as hysteresis makes it.
+    #[inline(always)]
     pub fn core_a(&self, winding_v: f64) -> f64 {
         let p = &self.parts;
         let square = winding_v * winding_v;
@@ -118,6 +120,7 @@ impl Circuit {
     }
 
     /// Capacitance from the drain to everything that stands still, at the given drain voltage and clamp node voltage.
+    #[inline(always)]
     pub fn drain_f(&self, drain_v: f64, clamp_node_v: f64) -> f64 {
         let p = &self.parts;
         p.transistor.capacitance_f(drain_v)
@@ -127,6 +130,7 @@ impl Circuit {
     }
 
     /// Capacitance across the secondary, reflected to the primary.
+    #[inline(always)]
     pub fn reflected_f(&self, winding_v: f64, output_v: f64) -> f64 {
         let p = &self.parts;
         let reverse_v = output_v + winding_v / p.turns_ratio;
@@ -134,11 +138,13 @@ impl Circuit {
     }
 
     /// Winding voltage (positive) at which the rectifier starts to conduct.
+    #[inline(always)]
     pub fn reflected_v(&self, output_v: f64) -> f64 {
         self.parts.turns_ratio * (output_v + self.parts.rectifier.drop_v)
     }
 
     /// Currents and algebraic voltages.
+    #[inline(always)]
     pub fn branches(&self, time_s: f64, s: &State, on: &Conduction) -> Branches {
         let p = &self.parts;
         let admittance = 1.0 / (p.leakage_loss_ohm + p.winding_ohm);
@@ -171,6 +177,7 @@ impl Circuit {
     }
 
     /// Rates of change of the state.
+    #[inline(always)]
     pub fn rates(&self, time_s: f64, s: &State, on: &Conduction, drive: &Drive) -> State {
         let p = &self.parts;
         let b = self.branches(time_s, s, on);
@@ -203,6 +210,7 @@ impl Circuit {
     }
 
     /// Current from the line into the bulk capacitor.
+    #[inline(always)]
     pub fn line_a(&self, bulk_v: f64, drive: &Drive) -> f64 {
         drive.line_v.map_or(0.0, |line_v| ((line_v - bulk_v) / self.parts.line_ohm).clamp(0.0, drive.line_limit_a))
     }
@@ -248,6 +256,7 @@ impl Circuit {
 
 impl Drive {
     /// Current out of the output capacitor.
+    #[inline(always)]
     pub fn output_a(&self, output_v: f64) -> f64 {
         // A constant-current load cannot draw from a discharged output.
         self.load_a * (output_v / 0.5).clamp(0.0, 1.0) + self.load_s * output_v

@@ -27,6 +27,7 @@ pub enum CapacitanceLaw {
 
 impl CapacitanceLaw {
     /// Small-signal capacitance at `voltage_v`, in farad.
+    #[inline(always)]
     pub fn capacitance_f(&self, voltage_v: f64) -> f64 {
         match *self {
             Self::Junction { zero_bias_f, potential_v, grading } => {

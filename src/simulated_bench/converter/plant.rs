@@ -45,6 +45,8 @@ pub struct Plant {
 
 /// Step of the averaged model.
 const STEP_S: f64 = 50e-6;
+/// How often it is asked whether that has settled.
+const SETTLING_S: f64 = 10e-3;
 /// Drop of the bridge rectifier.
 const BRIDGE_V: f64 = 1.6;
 /// Peak current of the source over its root-mean-square limit.
@@ -124,18 +126,34 @@ impl Plant {
     pub fn advance(&mut self, seconds: f64) {
         let mut left_s = seconds;
         while left_s > 0.0 {
+            let h = if self.at_rest { left_s } else { left_s.min(SETTLING_S) };
+            left_s -= h;
+            if self.at_rest { self.rest(h) } else { self.settle(h) }
+        }
+    }
+
+    fn rest(&mut self, seconds: f64) {
+        self.line.phase = (self.line.phase + seconds * self.line.frequency_hz).fract();
+        if let Some(orbit) = self.settled_orbit() {
+            let (slow, limiting, rms_a, line_w) =
+                (orbit.at(self.line.phase), orbit.limiting, orbit.line_rms_a, orbit.line_w);
+            self.slow = slow;
+            (self.line_square, self.line_w) = (rms_a * rms_a, line_w);
+            self.limiting_s = if limiting { 0.0 } else { self.limiting_s + seconds };
+        }
+    }
+
+    fn settle(&mut self, seconds: f64) {
+        let mut left_s = seconds;
+        while left_s > 0.0 {
             let h = left_s.min(STEP_S);
             left_s -= h;
-            if !self.at_rest {
-                self.slow_step(h);
-            }
+            self.slow_step(h);
             self.line.phase = (self.line.phase + h * self.line.frequency_hz).fract();
         }
-        if !self.at_rest {
-            self.at_rest = self.has_settled();
-        }
-        if let (true, Some(orbit)) = (self.at_rest, self.settled_orbit()) {
-            self.slow = orbit.at(self.line.phase);
+        if self.has_settled() {
+            self.at_rest = true;
+            self.rest(0.0);
         }
     }
 
@@ -159,7 +177,10 @@ impl Plant {
             Activity::Running(since_s) => since_s > self.control.soft_start_s,
             Activity::Waiting | Activity::Pausing(_) => false,
         };
+        // A board about to shut down, or a source that limits, may pass by the orbit without staying there.
+        let passing = self.pauses >= 2 || self.slow.controller.overloaded_s > 0.0 || self.line_limiting();
         soft_started
+            && !passing
             && self.settled_orbit().is_some_and(|orbit| {
                 let settled = orbit.at(self.line.phase);
                 (settled.bulk_v - self.slow.bulk_v).abs() < 0.5
@@ -196,15 +217,12 @@ impl Plant {
 
     /// Root-mean-square line current, over about a line cycle.
     pub fn line_current_rms(&self) -> f64 {
-        match self.settled_orbit().filter(|_| self.at_rest) {
-            Some(orbit) => orbit.line_rms_a,
-            None => self.line_square.sqrt(),
-        }
+        self.line_square.sqrt()
     }
 
     /// Real power drawn from the line, over about a line cycle.
     pub fn line_power(&self) -> f64 {
-        self.settled_orbit().filter(|_| self.at_rest).map_or(self.line_w, |orbit| orbit.line_w)
+        self.line_w
     }
 
     /// Whether the source has limited its current within the last line cycle.

@@ -15,12 +15,20 @@ pub(super) struct Recorder {
     protected: bool,
 }
 
-/// A relaxation ring in progress: its start, and the integral of the bulk voltage since.
+/// A relaxation ring in progress: its start, the levels it started with, and the integral of the bulk voltage since.
 #[derive(Debug, Clone, Copy)]
 struct Span {
     start_s: f64,
+    clamp_v: f64,
+    output_v: f64,
     length_s: f64,
     bulk_v_s: f64,
+}
+
+impl Span {
+    fn new(start_s: f64, state: &State) -> Self {
+        Self { start_s, clamp_v: state.clamp_v, output_v: state.output_v, length_s: 0.0, bulk_v_s: 0.0 }
+    }
 }
 
 impl Recorder {
@@ -45,7 +53,7 @@ impl Recorder {
 
     pub(super) fn truth(&self, circuit: &Circuit, state: &State, time_s: f64) -> Truth {
         let mut truth = self.truth.clone();
-        truth.relaxation_rings.extend(self.relaxation_ring(circuit, state, time_s));
+        truth.relaxation_rings.extend(self.relaxation_ring(circuit, time_s));
         truth.leakage_rings.extend(self.leakage_ring(circuit, state, time_s));
         truth
     }
@@ -67,7 +75,7 @@ impl Recorder {
         if let Some(last) = self.truth.cycles.last_mut() {
             last.mode = mode;
         }
-        self.truth.relaxation_rings.extend(self.relaxation_ring(circuit, state, time_s));
+        self.truth.relaxation_rings.extend(self.relaxation_ring(circuit, time_s));
         self.truth.leakage_rings.extend(self.leakage_ring(circuit, state, time_s));
         (self.ring, self.released_s, self.skipped, self.protected) = (None, None, false, false);
         self.truth.cycles.push(CycleTruth {
@@ -86,11 +94,11 @@ impl Recorder {
 
     /// While the rectifier conducts, the leakage rings from here; where the clamp alone took the pulse, or flattened a crest
     /// of the relaxation ring, that ring is free from here.
-    pub(super) fn clamp_releases(&mut self, time_s: f64, rectifier_on: bool) {
+    pub(super) fn clamp_releases(&mut self, time_s: f64, rectifier_on: bool, state: &State) {
         if rectifier_on {
             self.released_s = Some(time_s);
         } else {
-            self.demagnetised(time_s);
+            self.demagnetised(time_s, state);
         }
     }
 
@@ -100,17 +108,17 @@ impl Recorder {
     }
 
     /// A ring that reached the body diode is free from here on.
-    pub(super) fn body_blocks(&mut self, time_s: f64) {
+    pub(super) fn body_blocks(&mut self, time_s: f64, state: &State) {
         if let Some(ring) = &mut self.ring {
-            *ring = Span { start_s: time_s, length_s: 0.0, bulk_v_s: 0.0 };
+            *ring = Span::new(time_s, state);
         }
     }
 
-    fn demagnetised(&mut self, time_s: f64) {
+    fn demagnetised(&mut self, time_s: f64, state: &State) {
         if let Some(last) = self.truth.cycles.last_mut() {
             last.demagnetised_s.get_or_insert(time_s);
         }
-        self.ring = Some(Span { start_s: time_s, length_s: 0.0, bulk_v_s: 0.0 });
+        self.ring = Some(Span::new(time_s, state));
     }
 
     pub(super) fn rectifier_blocks(&mut self, time_s: f64, gate_off: bool, circuit: &Circuit, state: &State) {
@@ -119,7 +127,7 @@ impl Recorder {
         }
         self.truth.leakage_rings.extend(self.leakage_ring(circuit, state, time_s));
         self.released_s = None;
-        self.demagnetised(time_s);
+        self.demagnetised(time_s, state);
     }
 
     pub(super) fn skips(&mut self) {
@@ -130,10 +138,10 @@ impl Recorder {
         self.protected = true;
     }
 
-    fn relaxation_ring(&self, circuit: &Circuit, state: &State, end_s: f64) -> Option<RelaxationRingTruth> {
+    fn relaxation_ring(&self, circuit: &Circuit, end_s: f64) -> Option<RelaxationRingTruth> {
         let ring = self.ring.filter(|ring| ring.length_s > 0.0)?;
         let bulk_v = ring.bulk_v_s / ring.length_s;
-        let (square, node_capacitance_f) = circuit.relaxation_mode(bulk_v, state.clamp_v, state.output_v);
+        let (square, node_capacitance_f) = circuit.relaxation_mode(bulk_v, ring.clamp_v, ring.output_v);
         Some(RelaxationRingTruth {
             start_s: ring.start_s,
             end_s,

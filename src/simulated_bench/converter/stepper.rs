@@ -69,7 +69,7 @@ const EDGE_STEP_S: f64 = 1e-9;
 const FRESH_STEP_S: f64 = 2e-9;
 const FRESH_S: f64 = 150e-9;
 /// Longest step while the leakage rings, and otherwise.
-const CALM_STEP_S: f64 = 8e-9;
+const CALM_STEP_S: f64 = 7e-9;
 const QUIET_STEP_S: f64 = 12e-9;
 /// Longest step while nothing moves.
 const IDLE_STEP_S: f64 = 1e-6;
@@ -313,7 +313,7 @@ impl Stepper {
             }
             Event::ClampReleases => {
                 self.on.clamp = false;
-                self.recorder.clamp_releases(self.time_s, self.on.rectifier);
+                self.recorder.clamp_releases(self.time_s, self.on.rectifier, &self.state);
             }
             Event::RectifierConducts => {
                 self.on.rectifier = true;
@@ -331,7 +331,7 @@ impl Stepper {
             }
             Event::BodyBlocks => {
                 self.on.body = false;
-                self.recorder.body_blocks(self.time_s);
+                self.recorder.body_blocks(self.time_s, &self.state);
             }
         }
     }

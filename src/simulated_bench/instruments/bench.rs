@@ -7,6 +7,7 @@ use crate::{
     truth::TruthFile,
 };
 use rand_chacha::{ChaCha8Rng, rand_core::SeedableRng};
+use serde_json::{Value, json};
 use std::{
     sync::{Arc, Mutex, MutexGuard, PoisonError},
     time::Instant,
@@ -79,6 +80,22 @@ impl Bench {
     /// The board as it stands.
     pub fn plant(&self) -> &Plant {
         &self.plant
+    }
+
+    /// What the line really is.
+    pub fn line(&self) -> Value {
+        let Line { on, rms_v, frequency_hz, limit_a } = self.line;
+        json!({"on": on, "rms_v": rms_v, "frequency_hz": frequency_hz, "limit_a": limit_a})
+    }
+
+    /// What the load really draws while the output holds.
+    pub fn draw(&self) -> Value {
+        let (current_a, resistance_ohm) = match self.draw.demand {
+            LoadDemand::Off => (None, None),
+            LoadDemand::Current(current_a) => (Some(current_a), None),
+            LoadDemand::Resistance(ohm) => (None, Some(ohm)),
+        };
+        json!({"on": self.draw.on, "current_a": current_a, "resistance_ohm": resistance_ohm})
     }
 
     /// Where truths are written.

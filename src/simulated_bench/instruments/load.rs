@@ -1,5 +1,6 @@
-//! A programmable load: constant current in two ranges or constant resistance, with setting and reading errors, a minimum
-//! operating voltage, and a small leakage while its input is off. Settings need remote control, as on a serial line.
+//! A programmable load: constant current in two ranges or constant resistance, with setting and reading errors and a small
+//! leakage while its input is off. Settings need remote control, as on a serial line. Below its minimum operating voltage
+//! it draws less than it is set to, down to nothing; the equations of the output hold that.
 
 use super::{
     bench::{Draw, SharedBench, quirk, random},

@@ -58,23 +58,13 @@ fn refused(instrument: &mut impl Instrument, message: &str) -> i32 {
     first
 }
 
-/// Spellings of a header pattern: every option taken or left out, long or short, a suffix where there is one.
-fn spellings(pattern: &str) -> Vec<String> {
-    let bare = pattern.replace('#', "2");
-    let full = bare.replace(['[', ']'], "");
-    let short: String = full.split(':').map(|node| node.trim_end_matches(|c: char| c.is_ascii_lowercase())).fold(
-        String::new(),
-        |mut text, node| {
-            if !text.is_empty() {
-                text.push(':');
-            }
-            text.push_str(node);
-            text
-        },
-    );
-    let digits = |short: String| if pattern.contains('#') { full.replace("CHANnel", "CHAN") } else { short };
-    let without = bare.find('[').map_or(full.clone(), |at| bare[..at].to_owned());
-    vec![full.clone(), digits(short), without.clone(), full.to_lowercase(), format!(":{}", without.to_uppercase())]
+/// Spellings of a header pattern: every option taken or left out, long or short, in capitals or not.
+fn spellings(pattern: &str) -> [String; 4] {
+    let numbered = pattern.replace('#', "2");
+    let long = numbered.replace(['[', ']'], "");
+    let short: String = long.chars().filter(|c| !c.is_ascii_lowercase()).collect();
+    let without_option = numbered.split('[').next().unwrap().to_uppercase();
+    [long.to_lowercase(), format!(":{short}"), without_option, long]
 }
 
 fn every_header_is_known<D: Dialect>(instrument: &mut Device<D>) {
@@ -337,4 +327,7 @@ fn the_source_says_when_it_limits_its_current() {
     source.message(b"CURR:LIM 0.05");
     settle();
     assert_eq!(ask(&mut source, "STAT:QUES:COND?;*STB?"), "2;24");
+    source.message(b"CURR:LIM 3");
+    settle();
+    assert_eq!(ask(&mut source, "STAT:QUES:COND?;*STB?"), "0;16");
 }

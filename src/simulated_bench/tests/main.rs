@@ -5,13 +5,15 @@
 #[path = "../../../tests/need.rs"]
 mod need;
 
+mod boards;
 mod client;
+mod converter;
+mod front_end;
 mod instruments;
+mod ngspice;
+mod plant;
 mod process;
 mod pyvisa;
 mod scope;
-mod wires;
-mod boards;
-mod converter;
-mod ngspice;
 mod trace;
+mod wires;

@@ -24,8 +24,14 @@ use std::{
 const SEARCH_S: f64 = 10e-3;
 const AUTOMATIC_S: f64 = 2e-3;
 
+/// Kept before the start of a window: longer than any jitter.
+const MARGIN_S: f64 = 1e-6;
+
 /// Steadiness of the trigger on a steep edge.
 const JITTER_S: f64 = 0.15e-9;
+
+/// Acquisitions in an average.
+pub const AVERAGES: u8 = 8;
 
 /// Hysteresis of the trigger in divisions.
 const HYSTERESIS_DIVISIONS: f64 = 0.3;
@@ -76,14 +82,12 @@ impl Request<'_> {
         if self.settings.kind == AcquisitionType::Average {
             self.average(&mut captured, &mut stepper, &mut noise);
         }
-        let codes = [0, 1].map(|index| {
+        let nothing = vec![0.0; captured.volts.len()];
+        let mut codes = [None, None];
+        for (index, volts) in [&captured.volts, &nothing].into_iter().enumerate() {
             let channel = &self.settings.channels[index];
-            channel.display.then(|| {
-                let quiet = vec![0.0; if index == 1 { captured.volts.len() } else { 0 }];
-                let volts = if index == 0 { &captured.volts } else { &quiet };
-                self.quantise(channel, index, volts, &mut noise)
-            })
-        });
+            codes[index] = channel.display.then(|| self.quantise(channel, index, volts, &mut noise));
+        }
         let from_s = self.settings.start_s();
         let to_s = from_s + self.settings.window_s();
         let truth = truth::of_window(&stepper.truth(), captured.trigger_s, from_s, to_s);
@@ -108,10 +112,9 @@ impl Request<'_> {
         let from_s = trigger_s + self.settings.start_s();
         let interval_s = 1.0 / self.settings.rate_hz();
         let points = self.settings.points();
-        trace.extend(stepper, from_s, from_s + (points + 1) as f64 * interval_s);
         let volts = match self.settings.kind {
-            AcquisitionType::Peak => trace.extremes(from_s, interval_s, points),
-            _ => trace.samples(from_s, interval_s, points),
+            AcquisitionType::Peak => trace.extremes(stepper, from_s, interval_s, points),
+            _ => trace.samples(stepper, from_s, interval_s, points),
         };
         Some(Captured { trigger_s, volts })
     }
@@ -141,9 +144,6 @@ impl Request<'_> {
             .collect()
     }
 }
-
-/// Acquisitions in an average.
-const AVERAGES: u8 = 8;
 
 fn normal(noise: &mut ChaCha8Rng) -> f64 {
     StandardNormal.sample(noise)
@@ -220,28 +220,23 @@ impl<'a> Trace<'a> {
         }
     }
 
-    fn extend(&mut self, stepper: &mut Stepper, from_s: f64, to_s: f64) {
-        while self.latest().time_s < to_s {
-            self.advance(stepper);
-            self.forget(from_s);
-        }
-    }
-
-    fn samples(&self, from_s: f64, interval_s: f64, points: usize) -> Vec<f64> {
-        let mut at = 0;
+    /// Samples as the waveform is stepped on; only the stretch around a sample is kept.
+    fn samples(&mut self, stepper: &mut Stepper, from_s: f64, interval_s: f64, points: usize) -> Vec<f64> {
         let sample = |index: usize| {
             let time_s = from_s + index as f64 * interval_s;
-            while at + 2 < self.signals.len() && self.signals[at + 1].time_s <= time_s {
-                at += 1;
+            while self.latest().time_s < time_s {
+                self.advance(stepper);
+                self.forget(time_s);
             }
-            self.front_end.between(&self.signals[at], &self.signals[at + 1], time_s)
+            self.forget(time_s);
+            self.front_end.between(&self.signals[0], &self.signals[1], time_s)
         };
         (0..points).map(sample).collect()
     }
 
     /// Lowest and highest value in turn, each of the two intervals it stands for.
-    fn extremes(&self, from_s: f64, interval_s: f64, points: usize) -> Vec<f64> {
-        let fine = self.samples(from_s, interval_s / 8.0, points * 8);
+    fn extremes(&mut self, stepper: &mut Stepper, from_s: f64, interval_s: f64, points: usize) -> Vec<f64> {
+        let fine = self.samples(stepper, from_s, interval_s / 8.0, points * 8);
         let pairs = fine.chunks(16).flat_map(|chunk| {
             let lowest = chunk.iter().copied().fold(f64::INFINITY, f64::min);
             let highest = chunk.iter().copied().fold(f64::NEG_INFINITY, f64::max);
@@ -250,6 +245,3 @@ impl<'a> Trace<'a> {
         pairs.take(points).collect()
     }
 }
-
-/// Kept before the start of a window: longer than any jitter.
-const MARGIN_S: f64 = 1e-6;

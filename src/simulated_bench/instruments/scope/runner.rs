@@ -180,10 +180,10 @@ impl Runner {
         let bench_setting = bench.setting_key();
         let setting = key(&[settings.key(), bench_setting, self.model.bits.into(), running]);
         let repeat = self.repeats.get(&setting).copied().unwrap_or(0);
-        let plant = match self.settled.take().filter(|(setting, _)| *setting == bench_setting) {
-            Some((_, plant)) => plant,
-            None => bench.plant().clone(),
-        };
+        // A board that has settled holds its steady state ready, which took long to find.
+        let settled =
+            self.settled.take().filter(|(setting, _)| *setting == bench_setting && bench.plant().is_settled());
+        let plant = settled.map_or_else(|| bench.plant().clone(), |(_, plant)| plant);
         let job = Job::start(Task {
             model: self.model,
             probe: self.probe,
@@ -219,8 +219,11 @@ impl Runner {
             "start_s": settings.start_s(), "interval_s": record.interval_s(), "points": settings.points(),
             "repeat": repeat,
         });
-        let settings = serde_json::to_value(settings).unwrap_or_default();
-        let truth = record.truth.clone();
-        self.bench.now().truth().acquisition(&self.serial_number(), record.number, settings, window, truth);
+        let mut bench = self.bench.now();
+        let line = json!({
+            "simulated": true, "serial": self.serial_number(), "number": record.number, "window": window,
+            "settings": settings, "line": bench.line(), "load": bench.draw(),
+        });
+        bench.truth().acquisition(line, record.truth.clone());
     }
 }

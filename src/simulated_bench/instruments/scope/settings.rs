@@ -231,9 +231,9 @@ pub struct Limits;
 
 impl Limits {
     /// Seconds a division.
-    pub const TIME_SCALE_S: RangeInclusive<f64> = 2e-9..=10e-3;
+    pub const TIME_SCALE_S: RangeInclusive<f64> = 2e-9..=5e-3;
     /// Centre of the screen after the trigger.
-    pub const TIME_POSITION_S: RangeInclusive<f64> = -50e-3..=50e-3;
+    pub const TIME_POSITION_S: RangeInclusive<f64> = -25e-3..=25e-3;
     /// Holdoff.
     pub const HOLDOFF_S: RangeInclusive<f64> = 0.0..=1.0;
     /// Memory in points.

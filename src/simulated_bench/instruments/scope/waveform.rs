@@ -5,7 +5,7 @@
 //! `seconds = (index - xreference) * xincrement + xorigin`, zero being the trigger.
 
 use super::{
-    acquisition::Record,
+    acquisition::{AVERAGES, Record},
     settings::{AcquisitionType, Model},
 };
 use crate::instruments::{error::ScpiError, parameter::nr3};
@@ -75,16 +75,16 @@ impl Output {
             Format::Byte => (0, 8),
             Format::Word => (1, 16),
         };
-        let kind = match settings.kind {
-            AcquisitionType::Normal => 0,
-            AcquisitionType::Peak => 1,
-            AcquisitionType::Average => 2,
+        let (kind, count) = match settings.kind {
+            AcquisitionType::Normal => (0, 1),
+            AcquisitionType::Peak => (1, 1),
+            AcquisitionType::Average => (2, AVERAGES),
         };
         let codes_per_division = Model::of_bits(8).map_or(25.0, |model| model.codes_per_division());
         let increment_v = channel.scale_v / codes_per_division / f64::from(1_u32 << (bits - 8));
         let reference = if self.unsigned { 1_u32 << (bits - 1) } else { 0 };
         Ok(format!(
-            "{format},{kind},{points},1,{},{},0,{},{},{reference}",
+            "{format},{kind},{points},{count},{},{},0,{},{},{reference}",
             nr3(record.interval_s()),
             exact(settings.start_s()),
             exact(increment_v),
@@ -97,10 +97,7 @@ impl Output {
     /// # Errors
     /// -230 if the channel was not acquired.
     pub fn block(&self, record: &Record) -> Result<Vec<u8>, ScpiError> {
-        let payload = self.payload(self.codes(record)?, record.bits);
-        let mut block = block_header(payload.len());
-        block.extend(payload);
-        Ok(block)
+        Ok(definite_block(&self.payload(self.codes(record)?, record.bits)))
     }
 
     fn payload(&self, codes: &[u16], bits: u32) -> Vec<u8> {
@@ -115,10 +112,10 @@ impl Output {
     }
 }
 
-/// The header of a definite-length block of so many bytes.
-fn block_header(length: usize) -> Vec<u8> {
-    let digits = length.to_string();
-    format!("#{}{digits}", digits.len()).into_bytes()
+/// A payload as a definite-length block: `#`, the number of digits, the length in so many digits, the bytes.
+pub fn definite_block(payload: &[u8]) -> Vec<u8> {
+    let digits = payload.len().to_string();
+    [format!("#{}{digits}", digits.len()).as_bytes(), payload].concat()
 }
 
 /// A number with all the digits it needs: scales must not be rounded.
