@@ -8,3 +8,4 @@ mod acceptance;
 mod circuit;
 mod generate;
 mod quantity;
+mod recordings_rlc;
