@@ -40,6 +40,10 @@ const SHIFT_EVIDENCE: f64 = 30.0;
 /// m = 1 at a swing of nine tenths of the bias they are some 9 % and 30 %.
 const LARGEST_SHIFT: f64 = 0.12;
 const LARGEST_HARMONIC: f64 = 0.35;
+/// A falling capacitance lowers the frequency of large swings and never without a second harmonic: by 0.2 (m = 1.5) to 1.7 (m = 0.3)
+/// times the square of the harmonic over the fundamental for a junction law, by more for a law with a knee.
+const SHIFT_PER_HARMONIC: f64 = 8.0;
+const SMALLEST_SHIFT: f64 = 5e-4;
 /// Points a period that the fit keeps: block means of a thirty-second of a period lose 0.2 % of what could be known.
 const POINTS: f64 = 32.0;
 
@@ -52,7 +56,7 @@ pub(super) struct Tried<'a> {
     /// The shift of the frequency with amplitude, where the record asks for it.
     shift: Option<Shift>,
     /// Variance of the (averaged) noise as the ring feels it.
-    variance: f64,
+    pub(super) variance: f64,
     residual: Vec<f64>,
     pub(super) strength: f64,
 }
@@ -121,7 +125,7 @@ pub(super) fn attempt<'a>(record: &RingRecord<'a>, kind: RingKind) -> Option<Tri
 /// The fit with a frequency that moves with the amplitude.
 struct Shift {
     solution: Solution,
-    variance: f64,
+    pub(super) variance: f64,
     residual: Vec<f64>,
     /// Relative shift of the frequency at the start of the window.
     relative: f64,
@@ -138,7 +142,9 @@ fn shifted(series: &Series, plain: &Solution) -> Option<Shift> {
     let first = solution.linear[0].hypot(solution.linear[1]);
     let second = solution.linear[4].hypot(solution.linear[5]);
     let relative = chirp / angular;
-    let sane = decay > 0.0 && relative.abs() < LARGEST_SHIFT && second < LARGEST_HARMONIC * first;
+    let harmonic = second / first;
+    let shifted = -relative > SMALLEST_SHIFT && -relative < LARGEST_SHIFT.min(SHIFT_PER_HARMONIC * harmonic * harmonic);
+    let sane = decay > 0.0 && shifted && harmonic < LARGEST_HARMONIC;
     (sane && evidence > SHIFT_EVIDENCE).then_some(Shift { solution, variance, residual, relative })
 }
 
@@ -211,7 +217,7 @@ fn single(tried: &Tried<'_>) -> Result<Vec<Doubt>, Doubt> {
             break;
         }
         residual = left;
-        let harmonic = (1..=4).any(|n| (rest.frequency - f64::from(n) * own).abs() < NEAR_HARMONIC * own);
+        let harmonic = (1..=3).any(|n| (rest.frequency - f64::from(n) * own).abs() < NEAR_HARMONIC * own);
         let dies_sooner = rest.decay > 1.4 * own_decay;
         if share < REMAINDER_SHARE {
             continue;

@@ -6,12 +6,15 @@ use std::ops::Range;
 
 /// Cells of the coarse grid of starts and ends.
 const CELLS: usize = 12;
+/// Departure of a real ring from the model that is no reason to leave part of it out, over half the record's swing.
+const MODEL_ERROR: f64 = 0.004;
 /// Samples that the search keeps.
 const SEARCHED: usize = 4096;
 
 /// The samples of the free ring in a bare ring-down: the window in which a damped sinusoid, judged by what it leaves, pins the
-/// frequency down best. A window that holds the event is punished by what it leaves, one too short by what it lacks. `None` where
-/// no window holds a ring.
+/// frequency down best. A window that holds the event is punished by what it leaves, one too short by what it lacks. What it
+/// leaves counts as at least a fraction of the record's swing: no circuit follows the model more closely than that, and the late
+/// small swings of a record would otherwise be preferred for being purer. `None` where no window holds a ring.
 pub fn find_ring_down(record: &RingRecord<'_>) -> Option<Range<usize>> {
     let count = record.volts.len();
     let block = match record.times_s {
@@ -32,9 +35,12 @@ pub fn find_ring_down(record: &RingRecord<'_>) -> Option<Range<usize>> {
 
 fn search(record: &RingRecord<'_>) -> Option<Range<usize>> {
     let count = record.volts.len();
+    let extremes = record.volts.iter().fold((f64::INFINITY, f64::NEG_INFINITY), |(l, h), &v| (l.min(v), h.max(v)));
+    let floor = MODEL_ERROR * 0.5 * (extremes.1 - extremes.0);
+    let uncertainty = |window| uncertainty(record, window, floor);
     let cut = |cell: usize| cell * count / CELLS;
     let windows = (0..CELLS).flat_map(|first| (first + 1..=CELLS).map(move |last| cut(first)..cut(last)));
-    let judged = windows.filter_map(|window| Some((uncertainty(record, window.clone())?, window)));
+    let judged = windows.filter_map(|window| Some((uncertainty(window.clone())?, window)));
     let (mut best, mut window) = judged.min_by(|a, b| a.0.total_cmp(&b.0))?;
     let mut stride = count / CELLS / 2;
     while stride > 0 {
@@ -45,7 +51,7 @@ fn search(record: &RingRecord<'_>) -> Option<Range<usize>> {
             start..end.saturating_sub(stride),
             start..(end + stride).min(count),
         ];
-        let better = moves.into_iter().filter_map(|moved| Some((uncertainty(record, moved.clone())?, moved)));
+        let better = moves.into_iter().filter_map(|moved| Some((uncertainty(moved.clone())?, moved)));
         match better.min_by(|a, b| a.0.total_cmp(&b.0)).filter(|(trial, _)| *trial < best) {
             Some((trial, moved)) => (best, window) = (trial, moved),
             None => stride /= 2,
@@ -55,11 +61,12 @@ fn search(record: &RingRecord<'_>) -> Option<Range<usize>> {
 }
 
 /// Relative uncertainty of the frequency from that window; `None` where it holds no ring.
-fn uncertainty(record: &RingRecord<'_>, window: Range<usize>) -> Option<f64> {
+fn uncertainty(record: &RingRecord<'_>, window: Range<usize>, floor: f64) -> Option<f64> {
     if window.len() < verdict::FEWEST_SAMPLES {
         return None;
     }
     let tried = verdict::attempt(&record.part(window), RingKind::Relaxation)?;
     let rings = verdict::plausible(&tried).is_ok();
-    rings.then(|| tried.ring.damped_frequency_hz.relative_uncertainty())
+    let widened = (1.0 + floor * floor / tried.variance).sqrt();
+    rings.then(|| tried.ring.damped_frequency_hz.relative_uncertainty() * widened)
 }

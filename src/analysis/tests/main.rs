@@ -6,6 +6,7 @@ mod need;
 
 mod acceptance;
 mod circuit;
+mod fit;
 mod generate;
 mod quantity;
 mod recordings_rlc;
