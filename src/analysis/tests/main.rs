@@ -10,5 +10,5 @@ mod fit;
 mod generate;
 mod quantity;
 mod recording_flyback;
-mod waveform;
 mod recordings_rlc;
+mod waveform;
