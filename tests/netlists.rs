@@ -1,6 +1,7 @@
 //! Waveforms of netlists run by a general-purpose circuit simulator (ngspice), against truths computed without it: an
 //! oracle for the analysis that shares no line with the simulated bench. Where ngspice is absent a small stored set stands in.
 
+mod held;
 mod simulation;
 mod stored;
 mod truth;

@@ -13,6 +13,10 @@ use crate::{
 const RINGS: usize = 12;
 /// A ring shorter than this share of the longest adds less than it may spoil.
 const WORTH: f64 = 0.5;
+/// Periods at the start of a long ring that may be left out, where large swings bend it out of shape.
+const BENT: usize = 4;
+/// Periods that must remain of it.
+const REMAIN: f64 = 4.0;
 
 /// Analyses a record as the drain voltage of a switching converter or as a bare ring-down.
 pub fn analyse(samples: &Samples, subject: Subject, facts: &BoardFacts) -> Findings {
@@ -62,9 +66,11 @@ fn drain(samples: &Samples, facts: &BoardFacts) -> Findings {
     voltages(&segmentation, &mut findings);
     let record = record(samples);
     let relaxation = longest(&segmentation, |segment| segment.relaxation.as_ref());
+    let relaxation = relaxation.map(|window| settled(samples, window, RingKind::Relaxation));
     let relaxation = fit_rings(&record, relaxation, RingKind::Relaxation, &mut findings);
     findings.relaxation_ring = fit::combine(&relaxation);
     let leakage = longest(&segmentation, |segment| segment.leakage.as_ref());
+    let leakage = leakage.map(|window| settled(samples, window, RingKind::Leakage));
     let leakage = fit_rings(&record, leakage, RingKind::Leakage, &mut findings);
     findings.leakage_ring = fit::combine(&leakage);
     absences(&segmentation, &mut findings);
@@ -75,17 +81,34 @@ fn drain(samples: &Samples, facts: &BoardFacts) -> Findings {
 }
 
 /// The windows worth fitting: the longest, in the order of the record.
-fn longest(
-    segmentation: &Segmentation,
-    pick: fn(&Segment) -> Option<&RingWindow>,
-) -> impl Iterator<Item = std::ops::Range<usize>> {
+fn longest(segmentation: &Segmentation, pick: fn(&Segment) -> Option<&RingWindow>) -> impl Iterator<Item = RingWindow> {
     let mut windows: Vec<&RingWindow> = segmentation.segments.iter().filter_map(pick).collect();
     windows.sort_by(|a, b| b.periods.total_cmp(&a.periods));
     let enough = windows.first().map_or(0.0, |window| WORTH * window.periods);
     windows.retain(|window| window.periods >= enough);
     windows.truncate(RINGS);
     windows.sort_by_key(|window| window.samples.start);
-    windows.into_iter().map(|window| window.samples.clone()).collect::<Vec<_>>().into_iter()
+    windows.into_iter().cloned().collect::<Vec<_>>().into_iter()
+}
+
+/// The part of a ring that one damped sinusoid describes. At large swings a steep capacitance bends the first periods so far that
+/// none does; once they are left out, the small swings tell the capacitance at the bulk voltage.
+fn settled(samples: &Samples, window: RingWindow, kind: RingKind) -> std::ops::Range<usize> {
+    let record = record(samples);
+    let whole = window.samples.clone();
+    let bent = |part: &std::ops::Range<usize>| {
+        fit::fit_ring(&record.part(part.clone()), kind)
+            .is_err_and(|refusal| refusal.doubt.name == DoubtName::NotOneRing)
+    };
+    if !bent(&whole) {
+        return whole;
+    }
+    let period = window.period_s / samples.mean_interval_s();
+    let later = (1..=BENT).filter(|&periods| window.periods - periods as f64 >= REMAIN);
+    later
+        .map(|periods| whole.start + (periods as f64 * period) as usize..whole.end)
+        .find(|part| !bent(part))
+        .unwrap_or(whole)
 }
 
 fn fit_rings(

@@ -38,15 +38,27 @@ pub(super) fn relaxation(
     let mut halves = Vec::new();
     for _ in 0..3 {
         halves = half_cycles(trace, start..end, |_| centre_v, clear_v(trace, levels));
-        let whole = halves.len() / 2 * 2;
-        let (Some(first), Some(last)) = (halves.first(), whole.checked_sub(1).and_then(|at| halves.get(at))) else {
-            break;
-        };
-        // Over whole periods a damped ring averages to its centre but for the little it loses in half of one.
-        let range = trace.between(first.start_s, last.end_s);
-        centre_v = trace.mean_v(range.start, range.end.min(trace.len() - 1));
+        match centre_of(trace, &halves) {
+            Some(found_v) => centre_v = found_v,
+            None => break,
+        }
     }
     window(trace, start..end, &halves, centre_v)
+}
+
+/// Centre of a ring from its whole periods. The mean of a decaying ring over whole periods leans to the side of its first
+/// half-cycle; the mean over as many, half a period later, leans to the other by what the ring has kept until then. Weighed so,
+/// both cancel. `None` where no whole period stands.
+fn centre_of(trace: &Trace<'_>, halves: &[HalfCycle]) -> Option<f64> {
+    let mean_v = |halves: &[HalfCycle]| {
+        let range = trace.between(halves.first()?.start_s, halves.last()?.end_s);
+        Some(trace.mean_v(range.start, range.end.min(trace.len() - 1)))
+    };
+    let [first, _, third, ..] = halves else { return mean_v(halves).filter(|_| halves.len() == 2) };
+    let whole = (halves.len() - 1) / 2 * 2;
+    let (early_v, late_v) = (mean_v(&halves[..whole])?, mean_v(&halves[1..=whole])?);
+    let kept = (third.height_v / first.height_v).abs().min(1.0).sqrt();
+    Some((kept * early_v + late_v) / (kept + 1.0))
 }
 
 /// Where the relaxation ring is free of the body diode and of the ends of the vertical range.

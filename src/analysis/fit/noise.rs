@@ -44,8 +44,8 @@ pub(super) struct Remainder {
     pub(super) strength: f64,
 }
 
-/// The strongest damped sinusoid in the residuals.
-pub(super) fn remainder(series: &Series, residual: &[f64]) -> Option<Remainder> {
+/// The strongest damped sinusoid in the residuals, and what is left without it.
+pub(super) fn remainder(series: &Series, residual: &[f64]) -> Option<(Remainder, Vec<f64>)> {
     let left = series.with_volts(residual.to_vec());
     let start = start_values(&left)?;
     let (_, flat) = project(&Line, &left, &[])?;
@@ -53,10 +53,11 @@ pub(super) fn remainder(series: &Series, residual: &[f64]) -> Option<Remainder> 
     let frequency = nonlinear[1] / TAU;
     let rest = residuals(&DampedSinusoid, &left, &nonlinear, &linear);
     let noise = variance_at(&left, &rest, frequency, 6);
-    Some(Remainder {
+    let found = Remainder {
         amplitude_v: linear[0].hypot(linear[1]),
         frequency,
         decay: nonlinear[0],
         strength: (flat - squares) / noise.max(f64::MIN_POSITIVE),
-    })
+    };
+    Some((found, rest))
 }

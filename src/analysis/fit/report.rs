@@ -1,7 +1,7 @@
 //! A solution as the plain data that leaves this module: SI parameters from the start of the window, with their covariance.
 
-use super::{RingRecord, Times, ring::ring_of, series::Series, solve::Solution};
-use crate::findings::{Ring, RingFit, RingKind};
+use super::{RingRecord, Times, series::Series, solve::Solution};
+use crate::findings::{RingFit, RingKind};
 use nalgebra::{DMatrix, Matrix6};
 use realfft::num_complex::Complex64;
 use std::f64::consts::TAU;
@@ -58,11 +58,6 @@ fn covariance(solution: &Solution, span: f64, mean: Complex64, gain: f64) -> Mat
     by[(5, slope)] = 1.0 / span;
     let full = &by * &solution.inverse * by.transpose();
     Matrix6::from_fn(|row, column| full[(row, column)])
-}
-
-/// The small-signal ring of a fit.
-pub(super) fn small_signal(fit: &RingFit) -> Ring {
-    ring_of(fit)
 }
 
 /// Standard deviation of the residuals at the full rate. On even time the oscillation is a complex recurrence.

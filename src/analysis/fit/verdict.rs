@@ -2,18 +2,19 @@
 
 use super::{
     Accepted, Refusal, RingRecord, Times, clipping,
-    model::{DampedSinusoid, Line},
-    noise::{remainder, variance_at},
+    model::{DampedSinusoid, Line, ShiftedSinusoid},
+    noise::{Remainder, remainder, variance_at},
     report,
+    ring::ring_of,
     series::Series,
     solve::{Solution, project, residuals, solve},
     start::start_values,
 };
-use crate::findings::{Doubt, DoubtName, RingFit, RingKind};
+use crate::findings::{Doubt, DoubtName, Ring, RingFit, RingKind};
 use std::f64::consts::{PI, TAU};
 
 /// Fewest samples that are looked at: fewer than two a parameter say nothing.
-const FEWEST_SAMPLES: usize = 16;
+pub(super) const FEWEST_SAMPLES: usize = 16;
 /// Fewest ring periods in the window.
 const FEWEST_PERIODS: f64 = 3.0;
 /// Fewest samples a period.
@@ -29,30 +30,44 @@ const LEAST_STRENGTH: f64 = 200.0;
 const REMAINDER_STRENGTH: f64 = 45.0;
 /// Amplitude of another ring, over the ring's, from which the record is refused.
 const REMAINDER_SHARE: f64 = 0.03;
+/// Rings that are taken out of the residuals one after another.
+const MOST_REMAINDERS: usize = 3;
+/// Distance from a harmonic, over the ring's frequency, within which a remainder may be the ring's own distortion.
+const NEAR_HARMONIC: f64 = 0.1;
+/// What the shift must explain, in variances of the noise, to be believed.
+const SHIFT_EVIDENCE: f64 = 30.0;
+/// Largest relative shift of the frequency, and largest second harmonic over the fundamental, that a capacitance law gives: with
+/// m = 1 at a swing of nine tenths of the bias they are some 9 % and 30 %.
+const LARGEST_SHIFT: f64 = 0.12;
+const LARGEST_HARMONIC: f64 = 0.35;
+/// A falling capacitance lowers the frequency of large swings and never without a second harmonic: by 0.2 (m = 1.5) to 1.7 (m = 0.3)
+/// times the square of the harmonic over the fundamental for a junction law, by more for a law with a knee.
+const SHIFT_PER_HARMONIC: f64 = 8.0;
+const SMALLEST_SHIFT: f64 = 5e-4;
 /// Points a period that the fit keeps: block means of a thirty-second of a period lose 0.2 % of what could be known.
 const POINTS: f64 = 32.0;
 
 /// A fit on the way to its verdict.
-struct Tried<'a> {
+pub(super) struct Tried<'a> {
     record: RingRecord<'a>,
     series: Series,
-    solution: Solution,
-    fit: RingFit,
+    pub(super) fit: RingFit,
+    pub(super) ring: Ring,
+    /// The shift of the frequency with amplitude, where the record asks for it.
+    shift: Option<Shift>,
     /// Variance of the (averaged) noise as the ring feels it.
-    variance: f64,
+    pub(super) variance: f64,
     residual: Vec<f64>,
-    strength: f64,
+    pub(super) strength: f64,
 }
 
 pub(super) fn judge(record: &RingRecord<'_>, kind: RingKind) -> Result<Accepted, Refusal> {
     check_samples(record)?;
     let tried = attempt(record, kind).ok_or_else(|| refuse(DoubtName::NoRing, NO_RING.to_owned()))?;
-    verdict(&tried).map_err(|doubt| Refusal { doubt, rejected: Some(Box::new(tried.fit.clone())) })?;
-    let doubts = single(&tried).map_err(|doubt| Refusal { doubt, rejected: Some(Box::new(tried.fit.clone())) })?;
-    let mut fit = tried.fit;
-    fit.accepted = true;
-    let ring = report::small_signal(&fit);
-    Ok(Accepted { fit, ring, doubts })
+    match plausible(&tried).and_then(|()| single(&tried)) {
+        Ok(doubts) => Ok(Accepted { fit: RingFit { accepted: true, ..tried.fit }, ring: tried.ring, doubts }),
+        Err(doubt) => Err(Refusal { doubt, rejected: Some(Box::new(tried.fit)) }),
+    }
 }
 
 const NO_RING: &str = "nothing in the window swings like a ring: check that the probe is on the node and that the window holds \
@@ -83,22 +98,58 @@ fn check_samples(record: &RingRecord<'_>) -> Result<(), Refusal> {
     Ok(())
 }
 
-fn attempt<'a>(record: &RingRecord<'a>, kind: RingKind) -> Option<Tried<'a>> {
+/// The best fit of one ring, with the shift of its frequency where the samples ask for it. `None` where none can be had.
+pub(super) fn attempt<'a>(record: &RingRecord<'a>, kind: RingKind) -> Option<Tried<'a>> {
     let whole = Series::of(record);
     let start = start_values(&whole)?;
     let series = whole.thinned(start[1] / TAU, POINTS);
     let solution = solve(&DampedSinusoid, &series, &start, 60)?;
     let (_, flat) = project(&Line, &series, &[])?;
-    let residual = residuals(&DampedSinusoid, &series, &solution.nonlinear, &solution.linear);
-    let variance = variance_at(&series, &residual, solution.nonlinear[1] / TAU, 6);
+    let frequency = solution.nonlinear[1] / TAU;
+    let mut residual = residuals(&DampedSinusoid, &series, &solution.nonlinear, &solution.linear);
+    let mut variance = variance_at(&series, &residual, frequency, 6);
     let mut fit = report::ring_fit(record, kind, &series, &solution, variance);
     fit.residual_v = report::residual_v(record, &fit);
-    let strength = (flat - solution.squares) / variance.max(f64::MIN_POSITIVE);
-    Some(Tried { record: *record, series, solution, fit, variance, residual, strength })
+    let mut ring = ring_of(&fit);
+    let mut squares = solution.squares;
+    let shift = shifted(&series, &solution);
+    if let Some(found) = &shift {
+        (variance, squares) = (found.variance, found.solution.squares);
+        residual.clone_from(&found.residual);
+        ring = ring_of(&report::ring_fit(record, kind, &series, &found.solution, variance));
+    }
+    let strength = (flat - squares) / variance.max(f64::MIN_POSITIVE);
+    Some(Tried { record: *record, series, fit, ring, shift, variance, residual, strength })
+}
+
+/// The fit with a frequency that moves with the amplitude.
+struct Shift {
+    solution: Solution,
+    pub(super) variance: f64,
+    residual: Vec<f64>,
+    /// Relative shift of the frequency at the start of the window.
+    relative: f64,
+}
+
+/// Fits the shift, and keeps it only on evidence.
+fn shifted(series: &Series, plain: &Solution) -> Option<Shift> {
+    let start = [plain.nonlinear[0], plain.nonlinear[1], 0.0];
+    let solution = solve(&ShiftedSinusoid, series, &start, 40)?;
+    let [decay, angular, chirp] = *solution.nonlinear.as_slice() else { return None };
+    let residual = residuals(&ShiftedSinusoid, series, &solution.nonlinear, &solution.linear);
+    let variance = variance_at(series, &residual, angular / TAU, 9);
+    let evidence = (plain.squares - solution.squares) / variance.max(f64::MIN_POSITIVE);
+    let first = solution.linear[0].hypot(solution.linear[1]);
+    let second = solution.linear[4].hypot(solution.linear[5]);
+    let relative = chirp / angular;
+    let harmonic = second / first;
+    let shifted = -relative > SMALLEST_SHIFT && -relative < LARGEST_SHIFT.min(SHIFT_PER_HARMONIC * harmonic * harmonic);
+    let sane = decay > 0.0 && shifted && harmonic < LARGEST_HARMONIC;
+    (sane && evidence > SHIFT_EVIDENCE).then_some(Shift { solution, variance, residual, relative })
 }
 
 /// Whether what was fitted can be a ring at all.
-fn verdict(tried: &Tried<'_>) -> Result<(), Doubt> {
+pub(super) fn plausible(tried: &Tried<'_>) -> Result<(), Doubt> {
     let [amplitude, decay, frequency, ..] = tried.fit.parameters;
     let periods = frequency * tried.series.span_s;
     let quality = PI * frequency / decay;
@@ -106,6 +157,8 @@ fn verdict(tried: &Tried<'_>) -> Result<(), Doubt> {
     let seen = periods.min((amplitude / tried.variance.sqrt()).ln().max(0.0) / decay.max(1e-300) * frequency);
     let noise = tried.fit.residual_v;
     if tried.strength < LEAST_STRENGTH || amplitude < 3.0 * tried.variance.sqrt() {
+        // A second ring as strong as the first hides it: say so rather than that there is nothing.
+        single(tried)?;
         return Err(doubt(DoubtName::NoRing, NO_RING.to_owned()));
     }
     if decay <= 0.0 {
@@ -150,20 +203,54 @@ fn verdict(tried: &Tried<'_>) -> Result<(), Doubt> {
     Ok(())
 }
 
-/// Whether one ring describes the record: what is left after the fit may hold no other.
+/// Whether one ring describes the record: what is left after the fit may hold no other. What is left near the ring's own
+/// frequency or its harmonics and dies sooner is the ring's own distortion; what swings less than twice is a drift.
 fn single(tried: &Tried<'_>) -> Result<Vec<Doubt>, Doubt> {
-    let Some(rest) = remainder(&tried.series, &tried.residual) else { return Ok(Vec::new()) };
-    let share = rest.amplitude_v / tried.fit.parameters[0];
-    if rest.strength > REMAINDER_STRENGTH && share > REMAINDER_SHARE {
-        let frequency = rest.frequency / tried.series.span_s;
-        let sentence = format!(
-            "a second ring of {:.0} % stands at {:.4} MHz beside the one at {:.4} MHz: shorten the ground lead, or look for a snubber or a \
-             second resonance on the node",
-            100.0 * share,
-            frequency * 1e-6,
-            tried.fit.parameters[2] * 1e-6
-        );
-        return Err(doubt(DoubtName::NotOneRing, sentence));
+    let mut doubts: Vec<Doubt> = tried.shift.iter().filter(|s| s.relative.abs() > 1e-3).map(shift_doubt).collect();
+    let own = tried.ring.damped_frequency_hz.value * tried.series.span_s;
+    let own_decay = tried.ring.decay_per_s.value * tried.series.span_s;
+    let mut residual = tried.residual.clone();
+    for _ in 0..MOST_REMAINDERS {
+        let Some((rest, left)) = remainder(&tried.series, &residual) else { break };
+        let share = rest.amplitude_v / tried.fit.parameters[0];
+        if rest.strength < REMAINDER_STRENGTH {
+            break;
+        }
+        residual = left;
+        let harmonic = (1..=3).any(|n| (rest.frequency - f64::from(n) * own).abs() < NEAR_HARMONIC * own);
+        let dies_sooner = rest.decay > 1.4 * own_decay;
+        if share < REMAINDER_SHARE {
+            continue;
+        }
+        if rest.frequency < 2.0 {
+            let sentence = format!(
+                "the level under the ring bends by {:.0} % of the ring: start the window later, or let the board settle",
+                100.0 * share
+            );
+            doubts.push(doubt(DoubtName::Drifting, sentence));
+        } else if !(harmonic && dies_sooner) {
+            return Err(second_ring(tried, &rest, share));
+        }
     }
-    Ok(Vec::new())
+    Ok(doubts)
+}
+
+fn shift_doubt(shift: &Shift) -> Doubt {
+    let sentence = format!(
+        "the frequency at the start of the window is {:.1} % off the one of small swings: the node capacitance depends on voltage, and \
+         the small-signal value is given",
+        100.0 * shift.relative
+    );
+    doubt(DoubtName::AmplitudeDependent, sentence)
+}
+
+fn second_ring(tried: &Tried<'_>, rest: &Remainder, share: f64) -> Doubt {
+    let sentence = format!(
+        "one damped sinusoid leaves another of {:.0} % at {:.5} MHz beside the one at {:.5} MHz: shorten the ground lead, and look for a \
+         snubber or a second resonance on the node",
+        100.0 * share,
+        rest.frequency / tried.series.span_s * 1e-6,
+        tried.fit.parameters[2] * 1e-6
+    );
+    doubt(DoubtName::NotOneRing, sentence)
 }

@@ -6,7 +6,9 @@ mod need;
 
 mod acceptance;
 mod circuit;
+mod fit;
 mod generate;
 mod quantity;
 mod recording_flyback;
+mod recordings_rlc;
 mod waveform;
