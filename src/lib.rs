@@ -2,9 +2,15 @@
 //!
 //! Acquiring, each layer importing only those before it: `transport` (bytes on a wire), `scpi` (messages and sessions),
 //! `instrument` (what a scope, a load and a source can do, and the dialects that say how), `station` (the instruments of
-//! one bench, its files and limits), `sequence` (the plan, step by step). Analysing is the package
+//! one bench, its files and limits), `sequence` (the plan, step by step). Beside them `files` holds any file a user writes
+//! against what it should be. Analysing is the package
 //! [`ringstep_analysis`]. Keeping and showing: `record` (the run folder), `report`.
 
+pub mod files;
 pub mod instrument;
+pub mod record;
+pub mod report;
+pub mod scpi;
 pub mod sequence;
 pub mod station;
+pub mod transport;

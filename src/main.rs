@@ -1,2 +1,7 @@
-//! The command-line program.
-fn main() {}
+//! The command-line program: parse, run, exit code.
+
+mod cli;
+
+fn main() -> std::process::ExitCode {
+    cli::main()
+}

@@ -1,4 +1,18 @@
 //! Integration tests: one module a subject.
 #![allow(clippy::unwrap_used, missing_docs)]
 
+mod by_hand;
+mod cli;
+mod drivers;
+mod files;
+mod instruments;
+mod invented;
+mod layering;
 mod need;
+mod netlists;
+mod preflight;
+mod record;
+mod report;
+mod safe_off;
+mod scpi;
+mod transport;

@@ -28,7 +28,7 @@ pub enum Subject {
 }
 
 /// Everything one analysis found. Quantities are SI with the unit in the name.
-#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+#[derive(Debug, Clone, Default, PartialEq, Serialize, Deserialize)]
 pub struct Findings {
     /// Relaxation ring, combined over the rings of the record (in `RingDown`, the one ring).
     pub relaxation_ring: Option<Ring>,
@@ -117,10 +117,13 @@ pub struct RingFit {
     /// End of the fitted window.
     pub end_s: f64,
     /// Parameters in the order of [`RingFit::PARAMETERS`], SI.
+    #[serde(deserialize_with = "null_is_nan::array")]
     pub parameters: [f64; 6],
-    /// Covariance of the parameters, row by row.
+    /// Covariance of the parameters, row by row; not finite where it could not be had.
+    #[serde(deserialize_with = "null_is_nan::list")]
     pub covariance: Vec<f64>,
     /// Standard deviation of the residuals in volts.
+    #[serde(deserialize_with = "null_is_nan::one")]
     pub residual_v: f64,
     /// Why the iteration stopped.
     pub stopped: String,
@@ -189,4 +192,21 @@ pub enum DoubtName {
     Drifting,
     /// Simulated or played-back data.
     Simulated,
+}
+
+/// A refused fit may hold numbers that are not finite; JSON writes them as `null`, which is read back as NaN.
+mod null_is_nan {
+    use serde::{Deserialize, Deserializer};
+
+    pub(super) fn one<'de, D: Deserializer<'de>>(source: D) -> Result<f64, D::Error> {
+        Ok(Option::deserialize(source)?.unwrap_or(f64::NAN))
+    }
+
+    pub(super) fn list<'de, D: Deserializer<'de>>(source: D) -> Result<Vec<f64>, D::Error> {
+        Ok(Vec::<Option<f64>>::deserialize(source)?.into_iter().map(|value| value.unwrap_or(f64::NAN)).collect())
+    }
+
+    pub(super) fn array<'de, D: Deserializer<'de>>(source: D) -> Result<[f64; 6], D::Error> {
+        Ok(<[Option<f64>; 6]>::deserialize(source)?.map(|value| value.unwrap_or(f64::NAN)))
+    }
 }

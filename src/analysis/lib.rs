@@ -6,6 +6,11 @@
 //! No clock, file, socket or thread is used here.
 
 pub mod circuit;
+pub mod cycles;
+mod entry;
 pub mod findings;
 pub mod fit;
 pub mod quantity;
+pub mod waveform;
+
+pub use entry::analyse;

@@ -197,6 +197,6 @@ pub trait Source: Send {
     fn on(&mut self) -> Exchange<'_, ()>;
     /// Output off, read back.
     fn off(&mut self) -> Exchange<'_, ()>;
-    /// Reads what it delivers.
-    fn read(&mut self) -> Exchange<'_, SourceReading>;
+    /// Reads what it delivers; `None` from a source without meters.
+    fn read(&mut self) -> Exchange<'_, Option<SourceReading>>;
 }

@@ -1,6 +1,27 @@
 //! The plan carried out step by step on a station, emitting plain events; terminal, record and page only listen.
+//!
+//! [`run`] is the one entry: it reaches the ordered safe-off on every path, whether the plan ends, an error ends it or the
+//! operator stops it.
 
+mod acquire;
+mod bench;
+mod combine;
+mod descent;
+mod error;
 pub mod event;
+mod keeper;
 mod plan;
+mod point;
+mod preflight;
+mod rings;
+mod runner;
+mod settle;
+mod stop;
+mod survey;
 
+pub use error::RunError;
+pub use keeper::{KeepError, Keeper};
 pub use plan::*;
+pub use preflight::*;
+pub use runner::{Job, run};
+pub use stop::{Stop, Stopper};

@@ -1,8 +1,10 @@
 //! A station as its file states it: instruments, probe, earthing, safety limits. SI units.
 
-use ringstep_analysis::quantity::Measured;
+use crate::files::{Document, FileErrors, Table, Value};
+use ringstep_analysis::quantity::{Measured, Unit};
 
-/// A station.
+/// A station. Its file looks like this:
+#[doc = concat!("```toml\n", include_str!("../guide/examples/station.toml"), "```")]
 #[derive(Debug, Clone, PartialEq)]
 pub struct Station {
     /// Name of the bench or place on the line.
@@ -11,6 +13,8 @@ pub struct Station {
     pub scope: ScopeRole,
     /// The load on the main output.
     pub load: Role,
+    /// Whether an input terminal of the load is referenced to protective earth.
+    pub load_earthed: bool,
     /// The line source.
     pub source: Role,
     /// Whether the source's output (or the board's supply) is isolated from earth by a transformer.
@@ -85,4 +89,126 @@ pub struct SafetyLimits {
     pub line_current_a: f64,
     /// Highest load power.
     pub load_power_w: f64,
+}
+
+impl Station {
+    /// Version of the file format.
+    pub const FORMAT: u32 = 1;
+
+    /// Reads a station file; `path` only names it in messages.
+    ///
+    /// # Errors
+    /// Every mistake in the file, each with its place.
+    pub fn read(path: &str, text: &str) -> Result<Self, FileErrors> {
+        let document = Document::parse(path, text);
+        let station = Self::from_table(&document);
+        document.finish(station)
+    }
+
+    fn from_table(document: &Document<'_>) -> Option<Self> {
+        let root = document.root();
+        document.format(&root, "station", Self::FORMAT);
+        let name = root.required("name", Value::text);
+        let scope = root.required("scope", |value| value.table().and_then(|table| ScopeRole::from_table(&table)));
+        let load = root.required("load", |value| value.table().and_then(|table| with_flag(&table, "earthed")));
+        let source = root.required("source", |value| value.table().and_then(|table| with_flag(&table, "isolated")));
+        let probe = root.required("probe", |value| value.table().and_then(|table| Probe::from_table(&table)));
+        let limits = root.required("limits", |value| value.table().and_then(|table| SafetyLimits::from_table(&table)));
+        root.finish();
+        let ((load, load_earthed), (source, source_isolated)) = (load?, source?);
+        Some(Self {
+            name: name?,
+            scope: scope?,
+            load,
+            load_earthed,
+            source,
+            source_isolated,
+            probe: probe?,
+            limits: limits?,
+        })
+    }
+}
+
+/// The role of a load or a source with the one thing to know about its earthing.
+fn with_flag(table: &Table<'_, '_>, flag: &'static str) -> Option<(Role, bool)> {
+    let role = Role::from_table(table, true);
+    let flag = table.required(flag, Value::boolean);
+    table.finish();
+    Some((role?, flag?))
+}
+
+impl Role {
+    fn from_table(table: &Table<'_, '_>, may_be_by_hand: bool) -> Option<Self> {
+        if may_be_by_hand && table.has("by_hand") {
+            let description = table.required("by_hand", Value::text);
+            for key in ["address", "driver"] {
+                if table.has(key) {
+                    table.refuse(
+                        key,
+                        "stands beside `by_hand`",
+                        "a role is filled by an instrument or by hand, not both",
+                    );
+                }
+            }
+            return description.map(|description| Self::ByHand { description });
+        }
+        let driver = table.optional("driver", Value::text);
+        if !table.has("address") {
+            let by_hand = "or `by_hand = \"what it is\"` where an operator sets it";
+            table.missing("address", may_be_by_hand.then(|| by_hand.to_owned()));
+            return None;
+        }
+        let address = table.required("address", Value::text);
+        Some(Self::Instrument { address: address?, driver: driver? })
+    }
+}
+
+impl ScopeRole {
+    fn from_table(table: &Table<'_, '_>) -> Option<Self> {
+        let role = Role::from_table(table, false);
+        let channel = table.required("channel", |value| value.count(1..=8));
+        let earthed = table.required("earthed", Value::boolean);
+        let input_rating_v = table.required("input_rating", |value| value.quantity(Unit::Volt, 1.0..=1e3));
+        table.finish();
+        let channel = u8::try_from(channel?).ok()?;
+        Some(Self { role: role?, channel, earthed: earthed?, input_rating_v: input_rating_v? })
+    }
+}
+
+impl Probe {
+    fn from_table(table: &Table<'_, '_>) -> Option<Self> {
+        let factor = table.required("factor", |value| value.number(1.0..=10_000.0));
+        let capacitance_f = table.required("capacitance", |value| value.measured(Unit::Farad, 0.0..=1e-9));
+        let bandwidth_hz = table.required("bandwidth", |value| value.quantity(Unit::Hertz, 1e5..=1e11));
+        let rating_v = table.required("rating", |value| value.quantity(Unit::Volt, 1.0..=1e5));
+        let derating_frequency_hz =
+            table.required("derating_frequency", |value| value.quantity(Unit::Hertz, 1e2..=1e11));
+        let differential = table.required("differential", Value::boolean);
+        let serial_number = table.required("serial_number", Value::text);
+        let calibrated = table.optional("calibrated", Value::date);
+        let compensated = table.optional("compensated", Value::date);
+        table.finish();
+        Some(Self {
+            factor: factor?,
+            capacitance_f: capacitance_f?,
+            bandwidth_hz: bandwidth_hz?,
+            rating_v: rating_v?,
+            derating_frequency_hz: derating_frequency_hz?,
+            differential: differential?,
+            serial_number: serial_number?,
+            calibrated: calibrated?,
+            compensated: compensated?,
+        })
+    }
+}
+
+impl SafetyLimits {
+    fn from_table(table: &Table<'_, '_>) -> Option<Self> {
+        let drain_v = table.required("drain", |value| value.quantity(Unit::Volt, 1.0..=5e3));
+        let line_v = table.required("line", |value| value.quantity(Unit::Volt, 1.0..=1e3));
+        let line_current_a = table.required("line_current", |value| value.quantity(Unit::Ampere, 1e-3..=100.0));
+        let load_power_w = table.required("load_power", |value| value.quantity(Unit::Watt, 1e-3..=1e4));
+        table.finish();
+        Some(Self { drain_v: drain_v?, line_v: line_v?, line_current_a: line_current_a?, load_power_w: load_power_w? })
+    }
 }

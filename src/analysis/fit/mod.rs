@@ -11,7 +11,7 @@ mod start;
 mod verdict;
 mod window;
 
-pub use ring::{combine, ring_of};
+pub use ring::{combine, ring_of, weighted_mean};
 pub use window::find_ring_down;
 
 use crate::findings::{Doubt, Ring, RingFit, RingKind};

@@ -48,7 +48,9 @@ pub fn combine(rings: &[Ring]) -> Option<Ring> {
     })
 }
 
-fn weighted_mean(values: impl Iterator<Item = Measured> + Clone) -> Option<Measured> {
+/// The mean of several measurements of one quantity, weighted by inverse variance and widened by the Birge ratio where they
+/// scatter by more than their uncertainties say. `None` for none.
+pub fn weighted_mean(values: impl Iterator<Item = Measured> + Clone) -> Option<Measured> {
     let count = values.clone().count();
     // A floor under the variances keeps a value that claims no uncertainty at all from taking all the weight.
     let floor = values.clone().map(|m| m.value.abs() * 1e-9).fold(f64::MIN_POSITIVE, f64::max);

@@ -9,4 +9,6 @@ mod circuit;
 mod fit;
 mod generate;
 mod quantity;
+mod recording_flyback;
 mod recordings_rlc;
+mod waveform;

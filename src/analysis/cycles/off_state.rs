@@ -1,0 +1,144 @@
+//! What happens while the switch is off: plateau, demagnetisation knee, and the first fall of the relaxation ring.
+
+use super::on_state::Levels;
+use super::trace::{Line, Trace};
+use std::ops::Range;
+
+/// The reflected plateau, and the knee at its end where it was seen.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) struct Demagnetisation {
+    /// Plateau as a straight line.
+    pub(super) plateau: Line,
+    /// End of demagnetisation; `None` where the secondary still conducted at the end.
+    pub(super) knee_s: Option<f64>,
+    /// First fall of the relaxation ring through the bulk voltage: first sample below.
+    pub(super) fall: Option<usize>,
+}
+
+/// A fall through the bulk voltage.
+#[derive(Debug, Clone, Copy)]
+struct Fall {
+    at: usize,
+    /// Volt-seconds returned since the switch opened.
+    returned_vs: f64,
+    /// Time spent below.
+    below_s: f64,
+    lowest_v: f64,
+    /// Whether the voltage came back above.
+    came_back: bool,
+}
+
+/// Falls looked at: a leakage ring adds some, and none follow once the relaxation ring has begun.
+const FALLS: usize = 64;
+
+/// Reads one off-state. `built_vs` are the volt-seconds of the on-state before it, where the record shows all of it.
+/// `None` where the range is too short for a plateau.
+pub(super) fn demagnetisation(
+    trace: &Trace<'_>,
+    off: Range<usize>,
+    levels: &Levels,
+    bulk_v: f64,
+    built_vs: Option<f64>,
+) -> Option<Demagnetisation> {
+    if off.len() < 3 {
+        return None;
+    }
+    let noise_v = levels.noise_v;
+    let step_v = trace.samples.step_v().unwrap_or(0.0);
+    let falls = falls(trace, off.clone(), bulk_v, (3.0 * noise_v).max(0.6 * step_v));
+    let longest_s = falls.iter().map(|fall| fall.below_s).fold(0.0, f64::max);
+    let is_ring = |fall: &&Fall| {
+        let plateau_v = middle_level(trace, off.start..fall.at);
+        let deep = bulk_v - fall.lowest_v > (0.1 * (plateau_v - bulk_v)).max(5.0 * noise_v).max(1.6 * step_v);
+        let reset = match built_vs {
+            Some(built_vs) => fall.returned_vs > 0.5 * built_vs,
+            None => fall.below_s > 0.4 * longest_s || !fall.came_back,
+        };
+        deep && reset
+    };
+    match falls.iter().find(is_ring).map(|fall| fall.at) {
+        Some(fall) => with_ring(trace, off, bulk_v, fall),
+        None => without_ring(trace, off, levels, bulk_v),
+    }
+}
+
+/// Knee from the ring's first fall: a quarter period before the bulk voltage is reached, of which a cosine takes the last third
+/// to fall from half its height.
+fn with_ring(trace: &Trace<'_>, off: Range<usize>, bulk_v: f64, fall: usize) -> Option<Demagnetisation> {
+    let start_s = trace.time_s(off.start);
+    let fall_s = trace.crossing_s(fall, bulk_v);
+    let mut plateau_v = middle_level(trace, off.start..fall);
+    let mut knee_s = fall_s;
+    let mut plateau = trace.line(off.start..fall)?;
+    for _ in 0..2 {
+        let half_v = bulk_v + 0.5 * (plateau_v - bulk_v);
+        let half = (off.start..fall).rev().find(|&index| trace.volts[index] >= half_v).unwrap_or(off.start);
+        let half_s = trace.crossing_s(half + 1, half_v);
+        knee_s = (fall_s - 3.0 * (fall_s - half_s)).max(start_s);
+        let length_s = knee_s - start_s;
+        let late = trace.between(start_s + 0.5 * length_s, knee_s - 0.08 * length_s);
+        plateau = trace.line(late).or_else(|| trace.line(off.start..fall))?;
+        plateau_v = plateau.at(knee_s);
+    }
+    Some(Demagnetisation { plateau, knee_s: Some(knee_s), fall: Some(fall) })
+}
+
+/// No fall through the bulk voltage: either the secondary conducts to the end, or the knee has just been passed.
+fn without_ring(trace: &Trace<'_>, off: Range<usize>, levels: &Levels, bulk_v: f64) -> Option<Demagnetisation> {
+    let (start_s, end_s) = (trace.time_s(off.start), trace.time_s(off.end - 1));
+    let length_s = end_s - start_s;
+    let plateau = trace.line(trace.between(start_s + 0.4 * length_s, start_s + 0.75 * length_s))?;
+    let height_v = plateau.at(end_s) - bulk_v;
+    let last = off.end.saturating_sub(3).max(off.start)..off.end;
+    let last_v = trace.volts[last.clone()].iter().sum::<f64>() / last.len() as f64;
+    let step_v = trace.samples.step_v().unwrap_or(0.0);
+    let drop_v = plateau.at(end_s) - last_v;
+    if drop_v < (0.15 * height_v).max(5.0 * levels.noise_v).max(2.0 * step_v) {
+        let late = trace.between(start_s + 0.5 * length_s, end_s);
+        let plateau = trace.line(late).unwrap_or(plateau);
+        return Some(Demagnetisation { plateau, knee_s: None, fall: None });
+    }
+    let near = off.clone().rev().find(|&index| {
+        let line_v = plateau.at(trace.time_s(index));
+        line_v - trace.volts[index] < 0.1 * (line_v - bulk_v)
+    });
+    Some(Demagnetisation { plateau, knee_s: near.map(|index| trace.time_s(index)), fall: None })
+}
+
+/// Median of the middle of a range: the plateau, whatever rings at its beginning.
+fn middle_level(trace: &Trace<'_>, range: Range<usize>) -> f64 {
+    let (from, to) = (range.start + range.len() * 3 / 10, range.start + (range.len() * 8).div_ceil(10));
+    let stride = (to - from) / 500 + 1;
+    let mut middle: Vec<f64> = trace.volts[from..to.max(from + 1)].iter().copied().step_by(stride).collect();
+    let half = middle.len() / 2;
+    *middle.select_nth_unstable_by(half, f64::total_cmp).1
+}
+
+fn falls(trace: &Trace<'_>, off: Range<usize>, bulk_v: f64, clear_v: f64) -> Vec<Fall> {
+    let mut falls: Vec<Fall> = Vec::new();
+    let mut above = false;
+    let mut below: Option<Fall> = None;
+    for index in off.clone() {
+        let v = trace.volts[index];
+        if let Some(fall) = &mut below {
+            fall.lowest_v = fall.lowest_v.min(v);
+            if v > bulk_v + clear_v {
+                fall.below_s = trace.time_s(index) - trace.time_s(fall.at);
+                fall.came_back = true;
+                falls.extend(below.take());
+                above = true;
+            }
+        } else if above && v < bulk_v {
+            let returned_vs = trace.area_vs(off.start, index, bulk_v);
+            below = Some(Fall { at: index, returned_vs, below_s: 0.0, lowest_v: v, came_back: false });
+            above = false;
+        } else if v > bulk_v + clear_v {
+            above = true;
+        }
+        if falls.len() >= FALLS {
+            return falls;
+        }
+    }
+    falls.extend(below.map(|fall| Fall { below_s: trace.time_s(off.end - 1) - trace.time_s(fall.at), ..fall }));
+    falls
+}

@@ -1,0 +1,217 @@
+//! The one entry: from samples to findings. What can't be observed is `None`, with a doubt that says why.
+
+use crate::{
+    circuit,
+    cycles::{RingWindow, Segment, Segmentation, segment},
+    findings::{BoardFacts, CycleMode, Doubt, DoubtName, Findings, Ring, RingFit, RingKind, Subject},
+    fit::{self, Accepted, Refusal, RingRecord, Times},
+    quantity::Measured,
+    waveform::{Samples, TimeAxis},
+};
+
+/// Rings fitted of one record at most; the longest are taken.
+const RINGS: usize = 12;
+/// A ring shorter than this share of the longest adds less than it may spoil.
+const WORTH: f64 = 0.5;
+
+/// Analyses a record as the drain voltage of a switching converter or as a bare ring-down.
+pub fn analyse(samples: &Samples, subject: Subject, facts: &BoardFacts) -> Findings {
+    match subject {
+        Subject::Drain => drain(samples, facts),
+        Subject::RingDown => ring_down(samples, facts),
+    }
+}
+
+fn record(samples: &Samples) -> RingRecord<'_> {
+    let times_s = match samples.time() {
+        TimeAxis::Even { start_s, interval_s } => Times::Even { start_s: *start_s, interval_s: *interval_s },
+        TimeAxis::Uneven(times) => Times::Uneven(times),
+    };
+    RingRecord { times_s, volts: samples.volts(), step_v: samples.step_v(), clip_v: samples.clip_v() }
+}
+
+fn ring_down(samples: &Samples, facts: &BoardFacts) -> Findings {
+    let mut findings = Findings::default();
+    let record = record(samples);
+    match fit::find_ring_down(&record) {
+        None => findings.doubt(DoubtName::NoRing, "Nothing in the record rings: it is noise or an aperiodic decay."),
+        Some(window) => {
+            let rings = fit_rings(&record, [window], RingKind::Relaxation, &mut findings);
+            findings.relaxation_ring = fit::combine(&rings);
+        }
+    }
+    capacitance(&mut findings, facts);
+    findings
+        .doubt(DoubtName::NoSwitchingCycles, "A bare ring-down has no switching cycles: the ring is reported alone.");
+    findings
+}
+
+fn drain(samples: &Samples, facts: &BoardFacts) -> Findings {
+    let mut findings = Findings::default();
+    let highest = samples.volts().iter().copied().fold(f64::NEG_INFINITY, f64::max);
+    findings.peak_drain_voltage_v = Some(Measured::within(highest, samples.step_v().unwrap_or(0.0)));
+    let Some(segmentation) = segment(samples, facts) else {
+        findings.peak_drain_voltage_v = None;
+        findings.doubt(
+            DoubtName::NoSwitchingCycles,
+            "No switching cycles stand in the record; check probe and trigger, or read it as a bare ring-down.",
+        );
+        return findings;
+    };
+    rates(&segmentation, &mut findings);
+    voltages(&segmentation, &mut findings);
+    let record = record(samples);
+    let relaxation = longest(&segmentation, |segment| segment.relaxation.as_ref());
+    let relaxation = fit_rings(&record, relaxation, RingKind::Relaxation, &mut findings);
+    findings.relaxation_ring = fit::combine(&relaxation);
+    let leakage = longest(&segmentation, |segment| segment.leakage.as_ref());
+    let leakage = fit_rings(&record, leakage, RingKind::Leakage, &mut findings);
+    findings.leakage_ring = fit::combine(&leakage);
+    absences(&segmentation, &mut findings);
+    capacitance(&mut findings, facts);
+    leakage_inductance(&mut findings);
+    findings.cycles = segmentation.segments.iter().map(|segment| segment.cycle).collect();
+    findings
+}
+
+/// The windows worth fitting: the longest, in the order of the record.
+fn longest(
+    segmentation: &Segmentation,
+    pick: fn(&Segment) -> Option<&RingWindow>,
+) -> impl Iterator<Item = std::ops::Range<usize>> {
+    let mut windows: Vec<&RingWindow> = segmentation.segments.iter().filter_map(pick).collect();
+    windows.sort_by(|a, b| b.periods.total_cmp(&a.periods));
+    let enough = windows.first().map_or(0.0, |window| WORTH * window.periods);
+    windows.retain(|window| window.periods >= enough);
+    windows.truncate(RINGS);
+    windows.sort_by_key(|window| window.samples.start);
+    windows.into_iter().map(|window| window.samples.clone()).collect::<Vec<_>>().into_iter()
+}
+
+fn fit_rings(
+    record: &RingRecord<'_>,
+    windows: impl IntoIterator<Item = std::ops::Range<usize>>,
+    kind: RingKind,
+    findings: &mut Findings,
+) -> Vec<Ring> {
+    let mut rings = Vec::new();
+    let mut refused: Vec<Doubt> = Vec::new();
+    for window in windows {
+        match fit::fit_ring(&record.part(window), kind) {
+            Ok(Accepted { fit, ring, doubts }) => {
+                findings.ring_fits.push(fit);
+                rings.push(ring);
+                doubts.into_iter().for_each(|doubt| findings.add(doubt));
+            }
+            Err(Refusal { doubt, rejected }) => {
+                findings.ring_fits.extend(rejected.map(|fit| RingFit { accepted: false, ..*fit }));
+                refused.push(doubt);
+            }
+        }
+    }
+    if rings.is_empty() {
+        refused.into_iter().for_each(|doubt| findings.add(doubt));
+    }
+    rings
+}
+
+fn rates(segmentation: &Segmentation, findings: &mut Findings) {
+    let turn_ons = &segmentation.turn_ons_s;
+    if let (Some(first), Some(last), true) = (turn_ons.first(), turn_ons.last(), turn_ons.len() >= 2) {
+        let count = (turn_ons.len() - 1) as f64;
+        let mean_s = (last - first) / count;
+        let squares: f64 = turn_ons.windows(2).map(|pair| (pair[1] - pair[0] - mean_s).powi(2)).sum();
+        let relative = (squares / count).sqrt() / mean_s / count.sqrt();
+        findings.turn_on_rate_hz = Some(Measured { value: 1.0 / mean_s, standard_uncertainty: relative / mean_s });
+    } else {
+        findings.doubt(DoubtName::TooFewPeriods, "Fewer than two turn-ons stand in the record: no turn-on rate.");
+    }
+}
+
+fn voltages(segmentation: &Segmentation, findings: &mut Findings) {
+    let ringing = || segmentation.segments.iter().filter(|segment| segment.relaxation.is_some());
+    let all = || segmentation.segments.iter();
+    let bulk = spread(ringing().map(|segment| segment.bulk_v)).or_else(|| spread(all().map(|segment| segment.bulk_v)));
+    findings.bulk_voltage_v = bulk;
+    findings.reflected_voltage_v = spread(all().filter_map(|segment| segment.reflected_v));
+    if findings.reflected_voltage_v.is_none() {
+        findings.doubt(
+            DoubtName::ContinuousConduction,
+            "No end of demagnetisation stands in the record, so the reflected voltage at the knee can't be read.",
+        );
+    }
+}
+
+/// Mean and its standard uncertainty from the scatter; of one value the scatter is not known and taken as 1 %.
+fn spread(values: impl Iterator<Item = f64>) -> Option<Measured> {
+    let values: Vec<f64> = values.collect();
+    let count = values.len() as f64;
+    let mean = values.iter().sum::<f64>() / count;
+    let squares: f64 = values.iter().map(|value| (value - mean).powi(2)).sum();
+    match values.len() {
+        0 => None,
+        1 => Some(Measured { value: mean, standard_uncertainty: 0.01 * mean.abs() }),
+        _ => Some(Measured { value: mean, standard_uncertainty: (squares / (count - 1.0) / count).sqrt() }),
+    }
+}
+
+fn absences(segmentation: &Segmentation, findings: &mut Findings) {
+    if let Some(collapse) = &segmentation.collapse {
+        findings.doubt(DoubtName::ProtectionOrRestart, collapse);
+    }
+    let whole = || segmentation.segments.iter().filter(|segment| segment.cycle.mode != CycleMode::Incomplete);
+    if findings.relaxation_ring.is_none() {
+        if whole().count() > 0 && whole().all(|segment| segment.cycle.mode == CycleMode::Continuous) {
+            findings.doubt(
+                DoubtName::ContinuousConduction,
+                "Every cycle is in continuous conduction: there is no relaxation ring. Lower the load.",
+            );
+        }
+        findings.doubt(
+            DoubtName::NoRelaxationRing,
+            "No relaxation ring could be fitted. Lower the load until cycles are skipped, and capture the longest gap.",
+        );
+    }
+    if findings.leakage_ring.is_none() {
+        findings.doubt(
+            DoubtName::NoLeakageRing,
+            "No leakage ring could be told from the plateau. Capture the turn-off at a higher load and sample rate.",
+        );
+    }
+}
+
+fn capacitance(findings: &mut Findings, facts: &BoardFacts) {
+    match (findings.relaxation_ring, facts.primary_inductance_h) {
+        (Some(ring), Some(inductance)) => {
+            findings.node_capacitance_f = Some(circuit::node_capacitance(&ring, inductance));
+        }
+        (Some(_), None) => findings.doubt(
+            DoubtName::BoardFactMissing,
+            "The primary inductance is not known, so the ring gives no capacitance: state it in the board file.",
+        ),
+        (None, _) => {}
+    }
+}
+
+fn leakage_inductance(findings: &mut Findings) {
+    if let (Some(ring), Some(node)) = (findings.leakage_ring, findings.node_capacitance_f) {
+        findings.leakage_inductance_h = Some(circuit::leakage_inductance_textbook(&ring, node));
+        findings.doubt(
+            DoubtName::TextbookValue,
+            "The leakage inductance rests on the relaxation ring's capacitance; on the plateau the node has another.",
+        );
+    }
+}
+
+impl Findings {
+    fn doubt(&mut self, name: DoubtName, sentence: &str) {
+        self.add(Doubt { name, sentence: sentence.to_owned() });
+    }
+
+    /// Of one kind of doubt the first is told: rings of one record differ in figures, not in what is to be done.
+    fn add(&mut self, doubt: Doubt) {
+        if self.doubts.iter().all(|known| known.name != doubt.name) {
+            self.doubts.push(doubt);
+        }
+    }
+}

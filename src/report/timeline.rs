@@ -1,0 +1,67 @@
+//! The journal as a list of sentences with their times.
+
+use super::text;
+use crate::{record::journal::Entry, sequence::event::Event};
+
+/// One line of the timeline.
+#[derive(Debug)]
+pub(super) struct Moment {
+    pub(super) elapsed: String,
+    pub(super) kind: &'static str,
+    pub(super) sentence: String,
+}
+
+pub(super) fn moments(journal: &[Entry]) -> Vec<Moment> {
+    let moment = |entry: &Entry| {
+        let (kind, sentence) = tell(&entry.event);
+        Moment { elapsed: format!("{:.2} s", entry.elapsed_s), kind, sentence }
+    };
+    journal.iter().map(moment).collect()
+}
+
+fn tell(event: &Event) -> (&'static str, String) {
+    match event {
+        Event::RunStarted { software_version, .. } => ("start", format!("Run started by ringstep {software_version}.")),
+        Event::PreflightChecked { check, passed, .. } => {
+            ("preflight", format!("{check}: {}.", if *passed { "holds" } else { "does not hold" }))
+        }
+        Event::InstrumentIdentified { role, identity } => {
+            ("instrument", format!("{role} is {} {} at {}.", identity.maker, identity.model, identity.address))
+        }
+        Event::LineSet { line_v, frequency_hz } => {
+            ("line", format!("Line set to {}, {}.", text::short(*line_v, "V"), text::short(*frequency_hz, "Hz")))
+        }
+        Event::Settled { waited_s, load, source, .. } => {
+            let source = source.map_or(String::new(), |source| {
+                let limiting = if source.limiting { ", limiting its current" } else { "" };
+                format!(
+                    "; source at {}, {}{limiting}",
+                    text::short(source.voltage_v, "V"),
+                    text::short(source.current_a, "A")
+                )
+            });
+            let (volts, amperes) = (text::short(load.voltage_v, "V"), text::short(load.current_a, "A"));
+            ("settled", format!("Settled after {}: load at {volts}, {amperes}{source}.", text::short(*waited_s, "s")))
+        }
+        Event::Captured(capture) => {
+            let (purpose, load) = (text::purpose(capture.purpose), text::short(capture.load_a, "A"));
+            ("capture", format!("Capture {}: {purpose}, repeat {}, load {load}.", capture.number, capture.repeat))
+        }
+        Event::LoadStepped(step) => {
+            let [continuous, discontinuous, skipped] = step.cycles;
+            let power = text::short(step.load.power_w(), "W");
+            let cycles = format!("{continuous} continuous, {discontinuous} discontinuous, {skipped} skipped cycles");
+            ("load", format!("Load at {}, {power}: {cycles}.", text::short(step.set_a, "A")))
+        }
+        Event::PointFinished(point) => ("point", format!("Point at {} line finished.", text::short(point.line_v, "V"))),
+        Event::PointRefused { line_v, reason, .. } => {
+            ("refused", format!("Point at {} line refused: {reason}", text::short(*line_v, "V")))
+        }
+        Event::Noted { note } => ("note", note.clone()),
+        Event::SafeOff { reason, source_off, load_off } => {
+            let confirmed = |off: &bool| if *off { "confirmed off" } else { "NOT confirmed off" };
+            ("off", format!("Safe-off ({reason}): source {}, load {}.", confirmed(source_off), confirmed(load_off)))
+        }
+        Event::RunEnded { message, .. } => ("end", message.clone().unwrap_or_else(|| "Run ended.".to_owned())),
+    }
+}

@@ -1,0 +1,99 @@
+//! One point of the plan: a line voltage from its first settling to its finished values.
+
+use super::{
+    RunError,
+    bench::Bench,
+    combine::{Captured, combine},
+    descent::{Descent, Stepped},
+    event::{Event, Point},
+    survey::Survey,
+};
+use ringstep_analysis::findings::Findings;
+
+/// Relative movement of the line that counts as a change of it.
+const SAME_LINE: f64 = 1e-9;
+
+impl Bench<'_> {
+    /// Measures one point; `false` where it had to be refused.
+    pub(super) async fn measure_point(&mut self, index: usize, line_v: f64) -> Result<bool, RunError> {
+        self.point = index;
+        self.set_line(line_v).await?;
+        self.draw(self.job.plan.load_start_a).await?;
+        let load = self.settle_output().await?;
+        let first = self.settle_levels().await?;
+        self.learn_switching_period(&first);
+        let leakage = self.leakage_rings(&first).await?;
+        match self.step_down(first, load).await? {
+            Stepped::Visible(descent) => self.finish_point(descent, leakage).await,
+            Stepped::Refused(reason) => {
+                self.keeper.event(&Event::PointRefused { index, line_v, reason })?;
+                Ok(false)
+            }
+        }
+    }
+
+    async fn finish_point(&mut self, descent: Descent, leakage: Vec<(usize, Findings)>) -> Result<bool, RunError> {
+        let (index, line_v) = (self.point, self.line_v);
+        let relaxation = self.relaxation_rings(&descent.survey).await?;
+        let captured = Captured { survey: &descent.survey, relaxation: &relaxation, leakage: &leakage };
+        let values = combine(&captured, &self.facts);
+        let measured = values.relaxation_frequency_hz.is_some();
+        if !measured {
+            let reason = doubts_of(&relaxation);
+            let reason = format!("none of {} captures held a relaxation ring that fits: {reason}", relaxation.len());
+            self.keeper.event(&Event::PointRefused { index, line_v, reason })?;
+            return Ok(false);
+        }
+        let findings = leakage.into_iter().chain(relaxation).chain([(descent.survey.number, descent.survey.findings)]);
+        let point = Point {
+            index,
+            line_v,
+            load_a: self.load_a,
+            load_w: descent.load.power_w(),
+            boundary_load_a: descent.boundary_load_a,
+            values,
+            findings: findings.collect(),
+        };
+        self.keeper.event(&Event::PointFinished(point))?;
+        Ok(true)
+    }
+
+    /// Brings the line to a voltage with the load off while nothing is energised yet, or as it stands afterwards.
+    async fn set_line(&mut self, line_v: f64) -> Result<(), RunError> {
+        let frequency_hz = self.job.plan.line_frequency_hz;
+        let energised = self.line_v > 0.0;
+        if energised && (line_v - self.line_v).abs() <= SAME_LINE * line_v {
+            return Ok(());
+        }
+        self.source.set_line(line_v, frequency_hz).await?;
+        self.line_v = line_v;
+        // The range must show the harsher waveform before it comes.
+        self.vertical = None;
+        if !energised {
+            self.draw(0.0).await?;
+            self.source.on().await?;
+        }
+        self.keeper.event(&Event::LineSet { line_v, frequency_hz })?;
+        self.settle_output().await.map(|_| ())
+    }
+
+    /// Where the board file states no switching frequency, the cycles at the load start tell it.
+    fn learn_switching_period(&mut self, survey: &Survey) {
+        if self.facts.switching_period_s.is_some() {
+            return;
+        }
+        let mut periods: Vec<f64> = survey.whole_cycles().map(|cycle| cycle.end_s - cycle.start_s).collect();
+        periods.sort_by(f64::total_cmp);
+        self.facts.switching_period_s = periods.get(periods.len() / 2).copied();
+    }
+}
+
+fn doubts_of(findings: &[(usize, Findings)]) -> String {
+    let mut sentences: Vec<&str> = Vec::new();
+    for doubt in findings.iter().flat_map(|(_, findings)| &findings.doubts) {
+        if !sentences.contains(&doubt.sentence.as_str()) {
+            sentences.push(&doubt.sentence);
+        }
+    }
+    sentences.join(" ")
+}

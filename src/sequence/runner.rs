@@ -1,0 +1,102 @@
+//! A run from its first event to its last: prepares the instruments, measures point after point, and reaches safe-off
+//! whatever happens.
+
+use super::{
+    Keeper, Plan, RunError, Stop,
+    bench::Bench,
+    event::{Event, Outcome},
+};
+use crate::station::{Board, Connected, Station};
+
+/// What a run is to do, on which station, with which board.
+#[derive(Debug, Clone)]
+pub struct Job {
+    /// The plan.
+    pub plan: Plan,
+    /// The station.
+    pub station: Station,
+    /// The board.
+    pub board: Board,
+    /// Highest drain voltage that the preflight expects, in volts: sets the first vertical range.
+    pub expected_peak_v: f64,
+}
+
+impl Job {
+    /// Drain voltage at which the run is ended, in volts: the lowest of what station, probe and MOSFET stand.
+    pub fn drain_limit_v(&self) -> f64 {
+        self.station.limits.drain_v.min(self.station.probe.rating_v).min(self.board.drain_rating_v)
+    }
+}
+
+/// Carries out the plan. The outcome and its message are the last event too.
+///
+/// The stop ends a run between or inside exchanges at once; an exchange that is under way ends by itself.
+///
+/// # Errors
+/// Only what the record could not keep after safe-off; everything else is an outcome.
+pub async fn run(
+    job: &Job,
+    connected: &mut Connected,
+    keeper: &mut dyn Keeper,
+    stop: &Stop,
+) -> Result<(Outcome, Option<String>), RunError> {
+    let ended = tokio::select! {
+        biased;
+        () = stop.raised() => Err(RunError::Stopped),
+        ended = points(job, connected, keeper) => ended,
+    };
+    let off = connected.safe_off.off().await;
+    let (outcome, message) = match ended {
+        Ok((measured, 0)) if measured > 0 => (Outcome::Complete, None),
+        Ok((0, refused)) => (Outcome::Refused, Some(format!("none of {refused} points could be measured"))),
+        Ok((measured, refused)) => {
+            (Outcome::Partial, Some(format!("{refused} of {} points refused", measured + refused)))
+        }
+        Err(RunError::Stopped) => (Outcome::Stopped, Some(RunError::Stopped.to_string())),
+        Err(error @ RunError::ProtectionOrRestart { .. }) => (Outcome::Refused, Some(error.to_string())),
+        Err(error) => (Outcome::Failed, Some(error.to_string())),
+    };
+    let reason = message.clone().unwrap_or_else(|| "finished".into());
+    keeper.event(&Event::SafeOff {
+        reason,
+        source_off: off.source.is_confirmed(),
+        load_off: off.load.is_confirmed(),
+    })?;
+    keeper.event(&Event::RunEnded { outcome, message: message.clone() })?;
+    Ok((outcome, message))
+}
+
+/// Measures every point; returns how many were measured and how many refused.
+async fn points(job: &Job, connected: &mut Connected, keeper: &mut dyn Keeper) -> Result<(usize, usize), RunError> {
+    let mut bench = Bench {
+        job,
+        scope: &mut *connected.scope,
+        load: &mut *connected.load,
+        source: &mut *connected.source,
+        keeper,
+        facts: job.board.facts(&job.station),
+        point: 0,
+        line_v: 0.0,
+        load_a: 0.0,
+        captures: 0,
+        vertical: None,
+        survey_window_s: None,
+    };
+    bench.prepare().await?;
+    let mut measured = 0;
+    for (index, line_v) in job.plan.line_v.iter().enumerate() {
+        measured += usize::from(bench.measure_point(index, *line_v).await?);
+    }
+    Ok((measured, job.plan.line_v.len() - measured))
+}
+
+impl Bench<'_> {
+    /// Everything off and known before anything is energised.
+    async fn prepare(&mut self) -> Result<(), RunError> {
+        let station = &self.job.station;
+        self.source.prepare(station.limits.line_current_a).await?;
+        self.load.prepare().await?;
+        self.scope.prepare(station.scope.channel, station.probe.factor).await?;
+        Ok(())
+    }
+}
