@@ -30,10 +30,15 @@ const LEAST_STRENGTH: f64 = 200.0;
 const REMAINDER_STRENGTH: f64 = 45.0;
 /// Amplitude of another ring, over the ring's, from which the record is refused.
 const REMAINDER_SHARE: f64 = 0.03;
+/// Residual of the first quarter, over the ring's amplitude and over the residual of the last, from which it is no noise.
+const MISFIT_SHARE: f64 = 0.01;
+const MISFIT_RATIO: f64 = 3.0;
 /// Rings that are taken out of the residuals one after another.
 const MOST_REMAINDERS: usize = 3;
 /// Distance from a harmonic, over the ring's frequency, within which a remainder may be the ring's own distortion.
 const NEAR_HARMONIC: f64 = 0.1;
+/// The same for a leakage ring, which begins at full swing, where the body diode may conduct on the first troughs.
+const NEAR_HARMONIC_LEAKAGE: f64 = 0.2;
 /// What the shift must explain, in variances of the noise, to be believed.
 const SHIFT_EVIDENCE: f64 = 30.0;
 /// Largest relative shift of the frequency, and largest second harmonic over the fundamental, that a capacitance law gives: with
@@ -217,8 +222,12 @@ fn single(tried: &Tried<'_>) -> Result<Vec<Doubt>, Doubt> {
             break;
         }
         residual = left;
-        let harmonic = (1..=3).any(|n| (rest.frequency - f64::from(n) * own).abs() < NEAR_HARMONIC * own);
-        let dies_sooner = rest.decay > 1.4 * own_decay;
+        let (near, sooner) = match tried.fit.kind {
+            RingKind::Relaxation => (NEAR_HARMONIC, 1.4),
+            RingKind::Leakage => (NEAR_HARMONIC_LEAKAGE, 1.25),
+        };
+        let harmonic = (1..=3).any(|n| (rest.frequency - f64::from(n) * own).abs() < near * own);
+        let distortion = harmonic && rest.decay > sooner * own_decay;
         if share < REMAINDER_SHARE {
             continue;
         }
@@ -228,11 +237,35 @@ fn single(tried: &Tried<'_>) -> Result<Vec<Doubt>, Doubt> {
                 100.0 * share
             );
             doubts.push(doubt(DoubtName::Drifting, sentence));
-        } else if !(harmonic && dies_sooner) {
+        } else if !distortion {
             return Err(second_ring(tried, &rest, share));
+        } else if doubts.iter().all(|doubt| doubt.name != DoubtName::AmplitudeDependent) {
+            let sentence = "the first swings are not those of the later ones: the node capacitance depends on voltage, or a diode \
+                            conducts; start the window later for the small-signal value";
+            doubts.push(doubt(DoubtName::AmplitudeDependent, sentence.to_owned()));
         }
     }
-    Ok(doubts)
+    let distorted = doubts.iter().any(|doubt| doubt.name == DoubtName::AmplitudeDependent);
+    match misfit(tried).filter(|_| !distorted && tried.fit.kind == RingKind::Relaxation) {
+        Some(doubt) => Err(doubt),
+        None => Ok(doubts),
+    }
+}
+
+/// What a fit leaves is noise, as strong at the end as at the beginning, unless more than one ring was there: that dies away.
+fn misfit(tried: &Tried<'_>) -> Option<Doubt> {
+    let quarter = tried.residual.len() / 4;
+    let rms = |part: &[f64]| (part.iter().map(|r| r * r).sum::<f64>() / part.len() as f64).sqrt();
+    let (first, last) = (rms(&tried.residual[..quarter]), rms(&tried.residual[3 * quarter..]));
+    let share = (first - 0.4 * tried.record.step_v.unwrap_or(0.0)) / tried.fit.parameters[0];
+    (share > MISFIT_SHARE && first > MISFIT_RATIO * last).then(|| {
+        let sentence = format!(
+            "one damped sinusoid leaves {:.1} % of the ring in its first quarter and little later: something else rings or conducts there; \
+             start the window later, or look for a second resonance on the node",
+            100.0 * share
+        );
+        doubt(DoubtName::NotOneRing, sentence)
+    })
 }
 
 fn shift_doubt(shift: &Shift) -> Doubt {

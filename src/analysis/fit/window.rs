@@ -8,6 +8,8 @@ use std::ops::Range;
 const CELLS: usize = 12;
 /// Departure of a real ring from the model that is no reason to leave part of it out, over half the record's swing.
 const MODEL_ERROR: f64 = 0.004;
+/// How far swings before the window may be from the ring, over its amplitude there, to belong to it.
+const ROUGHLY: f64 = 0.35;
 /// Samples that the search keeps.
 const SEARCHED: usize = 4096;
 
@@ -57,7 +59,32 @@ fn search(record: &RingRecord<'_>) -> Option<Range<usize>> {
             None => stride /= 2,
         }
     }
-    Some(window)
+    let start = swinging_before(record, &window);
+    Some(start..window.end)
+}
+
+/// Where the swings before the window begin: as far back as they still follow the ring roughly. Swings that belong to the ring but
+/// do not fit it are not left out to make it look better.
+fn swinging_before(record: &RingRecord<'_>, window: &Range<usize>) -> usize {
+    let Some(tried) = verdict::attempt(&record.part(window.clone()), RingKind::Relaxation) else { return window.start };
+    let time = |n: usize| match record.times_s {
+        Times::Even { start_s, interval_s } => start_s + n as f64 * interval_s,
+        Times::Uneven(times) => times[n],
+    };
+    let [amplitude, decay, frequency, ..] = tried.fit.parameters;
+    let stride = ((window.len() as f64 / (tried.fit.end_s - tried.fit.start_s) / frequency) as usize / 2).max(2);
+    let mut start = window.start;
+    while start >= stride {
+        let block = start - stride..start;
+        let squares: f64 =
+            block.clone().map(|n| (record.volts[n] - tried.fit.model_v(time(n) - tried.fit.start_s)).powi(2)).sum();
+        let envelope = amplitude * (-decay * (time(start) - tried.fit.start_s)).exp();
+        if (squares / stride as f64).sqrt() > ROUGHLY * envelope {
+            break;
+        }
+        start = block.start;
+    }
+    start
 }
 
 /// Relative uncertainty of the frequency from that window; `None` where it holds no ring.
