@@ -1,5 +1,5 @@
 //! Integration tests: one module a subject.
-#![allow(clippy::unwrap_used, missing_docs)]
+#![allow(clippy::unwrap_used, missing_docs, unreachable_pub)]
 
 mod by_hand;
 mod cli;

@@ -28,7 +28,7 @@ pub(super) struct Descent {
 /// What the load steps came to.
 pub(super) enum Stepped {
     /// Enough of the relaxation ring is visible.
-    Visible(Descent),
+    Visible(Box<Descent>),
     /// It is not, down to the floor: why.
     Refused(String),
 }
@@ -43,7 +43,7 @@ impl Bench<'_> {
             self.stepped(&survey, load)?;
             if survey.visible_ring_periods().is_some_and(|periods| periods >= self.job.plan.ring_periods) {
                 let boundary_load_a = self.refine_boundary(&survey, without_skips_a).await?;
-                return Ok(Stepped::Visible(Descent { survey, load, boundary_load_a }));
+                return Ok(Stepped::Visible(Box::new(Descent { survey, load, boundary_load_a })));
             }
             if survey.modes()[2] == 0 {
                 without_skips_a = Some(self.load_a);

@@ -24,7 +24,7 @@ impl Bench<'_> {
         self.learn_switching_period(&first);
         let leakage = self.leakage_rings(&first).await?;
         match self.step_down(first, load).await? {
-            Stepped::Visible(descent) => self.finish_point(descent, leakage).await,
+            Stepped::Visible(descent) => self.finish_point(*descent, leakage).await,
             Stepped::Refused(reason) => {
                 self.keeper.event(&Event::PointRefused { index, line_v, reason })?;
                 Ok(false)
