@@ -52,7 +52,8 @@ impl Bench<'_> {
             sha256: String::new(),
         })?;
         self.captures += 1;
-        let samples = samples_of(&capture.waveform).map_err(|error| RunError::Unreadable { number, reason: error.to_string() })?;
+        let samples = samples_of(&capture.waveform)
+            .map_err(|error| RunError::Unreadable { number, reason: error.to_string() })?;
         self.keeper.event(&Event::Captured(capture))?;
         self.check_drain_limit(&samples)?;
         Ok(Acquired { number, samples, vertical })

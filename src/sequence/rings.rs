@@ -70,7 +70,8 @@ fn turn_off_trigger(survey: &Survey) -> Trigger {
     let findings = &survey.findings;
     let level_v = match (findings.bulk_voltage_v, findings.reflected_voltage_v) {
         (Some(bulk), Some(reflected)) => {
-            let quality_factor = findings.relaxation_ring.map_or(USUAL_QUALITY_FACTOR, |ring| ring.quality_factor.value);
+            let quality_factor =
+                findings.relaxation_ring.map_or(USUAL_QUALITY_FACTOR, |ring| ring.quality_factor.value);
             let crest = (-std::f64::consts::PI / quality_factor).exp();
             bulk.value + reflected.value * 0.5 * (1.0 + crest)
         }
