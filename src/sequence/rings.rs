@@ -23,7 +23,7 @@ impl Bench<'_> {
     /// Captures the relaxation ring as often as the plan says.
     pub(super) async fn relaxation_rings(&mut self, survey: &Survey) -> Result<Vec<(usize, Findings)>, RunError> {
         let window_s = relaxation_window_s(survey).unwrap_or_else(|| self.survey_window_s.unwrap_or(1e-3));
-        let horizontal = Horizontal { window_s, start_s: -BEFORE_TRIGGER * window_s };
+        let horizontal = Horizontal { window_s, start_s: -BEFORE_TRIGGER * window_s, interval_s: None };
         let count = self.job.plan.relaxation_captures;
         self.rings(Purpose::RelaxationRing, horizontal, survey, count).await
     }
@@ -34,7 +34,7 @@ impl Bench<'_> {
             self.note(format!("survey {} shows no whole plateau: no leakage ring was captured", survey.number))?;
             return Ok(Vec::new());
         };
-        let horizontal = Horizontal { window_s: before_s + after_s, start_s: -before_s };
+        let horizontal = Horizontal { window_s: before_s + after_s, start_s: -before_s, interval_s: None };
         let count = self.job.plan.leakage_captures;
         self.rings(Purpose::LeakageRing, horizontal, survey, count).await
     }
