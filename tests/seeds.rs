@@ -19,8 +19,9 @@ const CAPACITANCE: f64 = 0.02;
 const FREQUENCY: f64 = 0.005;
 /// A turn-on is found this well: edges take their time.
 const EDGE_S: f64 = 0.15e-6;
-/// Samples from the conduction boundary within which either class may stand.
-const BOUNDARY_SAMPLES: f64 = 2.0;
+/// Time from the conduction boundary within which either class may stand: the recovery of these boards' rectifiers holds the
+/// plateau for up to 50 ns, then a cosine of 500 kHz takes 100 ns to fall by a twentieth of it.
+const BOUNDARY_S: f64 = 150e-9;
 
 fn seeds() -> RangeInclusive<u64> {
     let count = env::var("RINGSTEP_SEEDS").ok().and_then(|count| count.parse().ok()).unwrap_or(1);
@@ -104,7 +105,7 @@ impl Off {
     }
 
     fn cycles(&mut self, label: &str, samples: &Samples, found: &[Cycle], truth: &[Value]) {
-        let near_s = BOUNDARY_SAMPLES * samples.mean_interval_s();
+        let near_s = BOUNDARY_S + 2.0 * samples.mean_interval_s();
         let inside = |time_s: f64| time_s > samples.start_s() + EDGE_S && time_s < samples.end_s() - EDGE_S;
         for pair in truth.windows(2) {
             let (start_s, end_s) = (pair[0]["start_s"].as_f64().unwrap(), pair[1]["start_s"].as_f64().unwrap());

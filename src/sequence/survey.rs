@@ -15,9 +15,8 @@ use std::time::Instant;
 const CYCLES: usize = 6;
 /// Switching periods in the first window.
 const FIRST_WINDOW_PERIODS: f64 = 40.0;
-/// Samples that a switching period is worth in a survey: the conduction boundary is blurred by as much through the recovery of
-/// the rectifier and the fall at turn-on, and a longer record costs its transfer at every load step.
-const SAMPLES_A_PERIOD: f64 = 150.0;
+/// Samples that a switching period is worth in a survey: enough for its edges. More only cost their transfer at every load step.
+const SAMPLES_A_PERIOD: f64 = 1000.0;
 /// First window where no switching frequency is stated.
 const FIRST_WINDOW_S: f64 = 1e-3;
 /// Longest window: a longer burst period is not surveyed.
