@@ -15,6 +15,8 @@ const RINGS: usize = 12;
 const WORTH: f64 = 0.5;
 /// Periods at the start of a long ring that may be left out, where large swings bend it out of shape.
 const BENT: usize = 4;
+/// Samples of an on-state below which turn-ons may be missed.
+const ON_SAMPLES: usize = 6;
 /// Periods that must remain of it.
 const REMAIN: f64 = 4.0;
 
@@ -179,6 +181,13 @@ fn spread(values: impl Iterator<Item = f64>) -> Option<Measured> {
 }
 
 fn absences(segmentation: &Segmentation, findings: &mut Findings) {
+    if segmentation.on_samples < ON_SAMPLES {
+        findings.doubt(
+            DoubtName::TooFewPoints,
+            "The on-states hold only a few samples each, so that turn-ons may be missed and gaps be taken for skipped \
+             cycles. Capture a shorter window or at a higher sample rate.",
+        );
+    }
     if let Some(collapse) = &segmentation.collapse {
         findings.doubt(DoubtName::ProtectionOrRestart, collapse);
     }

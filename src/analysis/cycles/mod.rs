@@ -43,6 +43,8 @@ pub struct Segmentation {
     pub on_v: f64,
     /// Standard deviation of the noise in volts.
     pub noise_v: f64,
+    /// Median number of samples in an on-state: with few, turn-ons may be missed.
+    pub on_samples: usize,
     /// What looks like protection or restart rather than regulation, in words; `None` where nothing does.
     pub collapse: Option<String>,
 }
@@ -60,7 +62,11 @@ pub fn segment(samples: &Samples, facts: &BoardFacts) -> Option<Segmentation> {
     let turn_ons_s: Vec<f64> = found.list.iter().filter(|on| !on.cut_at_start).map(|on| on.turn_on_s).collect();
     mode::classify(&mut segments, &turn_ons_s, facts);
     let collapse = mode::collapse(&segments, &turn_ons_s, facts);
-    Some(Segmentation { segments, turn_ons_s, on_v: found.levels.on_v, noise_v: found.levels.noise_v, collapse })
+    let mut on_samples: Vec<usize> = found.list.iter().map(|on| on.end - on.start).collect();
+    on_samples.sort_unstable();
+    let on_samples = on_samples[on_samples.len() / 2];
+    let (on_v, noise_v) = (found.levels.on_v, found.levels.noise_v);
+    Some(Segmentation { segments, turn_ons_s, on_v, noise_v, on_samples, collapse })
 }
 
 /// One off-state: the on-state before it (`None` at the beginning of the record) and its samples.

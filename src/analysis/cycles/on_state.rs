@@ -58,7 +58,10 @@ const LEAVE: f64 = 0.35;
 const HIGH: [f64; 3] = [0.75, 0.6, 0.45];
 
 /// An edge steeper than a ring of this swing and quarter period by this factor is a switch that closes.
-const STEEP: f64 = 3.0;
+const STEEP: f64 = 2.2;
+
+/// Samples that most on-states must have: fewer can be told from noise by nothing.
+const LEAST_SAMPLES: usize = 3;
 
 /// Length of a turn-on's edge, from its beginning to a quarter of its height, over the time of its middle half: a switch that
 /// closes against the recovering rectifier begins slowly.
@@ -69,14 +72,15 @@ const RESOLVED: f64 = 3.0;
 
 /// Volt-seconds that a run adds over volt-seconds that the swing before it took: at most 1.5 for a ring that touches zero
 /// (the body diode carries no more than the ring brought), a multiple of that where the switch takes up energy.
-const ENERGISING: f64 = 3.0;
+const ENERGISING: f64 = 2.25;
 
-/// The on-states of a record; `None` where there is no lower level that stands clear of the noise.
+/// The on-states of a record; `None` where there is no lower level that stands clear of the noise, or the samples are too far
+/// apart to show one.
 pub(super) fn find(trace: &Trace<'_>) -> Option<OnStates> {
     let (on_v, mean_v) = levels(trace)?;
     let step_noise_v = trace.samples.step_v().unwrap_or(0.0) / 12_f64.sqrt();
     let runs = runs(trace, on_v + ENTER * (mean_v - on_v), on_v + LEAVE * (mean_v - on_v));
-    let noise_v = noise(trace, &runs).max(step_noise_v);
+    let noise_v = noise(trace, &runs)?.max(step_noise_v);
     if mean_v - on_v < 8.0 * noise_v.max(1e-12 * mean_v.abs()) {
         return None;
     }
@@ -85,7 +89,8 @@ pub(super) fn find(trace: &Trace<'_>) -> Option<OnStates> {
     for run in runs {
         found.take(trace, run);
     }
-    (!found.list.is_empty()).then_some(found)
+    let resolved = found.list.iter().filter(|on| on.end - on.start >= LEAST_SAMPLES).count();
+    (resolved > 0 && 2 * resolved >= found.list.len()).then_some(found)
 }
 
 impl OnStates {
@@ -103,7 +108,7 @@ impl OnStates {
             self.swings.push(run);
             return;
         }
-        let edge = if cut_at_start { 0 } else { fall.edge(trace, run.start) };
+        let edge = if cut_at_start { 0 } else { fall.edge(trace, run.start, &self.levels) };
         let turn_on_s = if cut_at_start { trace.time_s(0) } else { fall.low_s };
         let turn_off_s = if cut_at_end {
             trace.time_s(trace.len() - 1)
@@ -151,11 +156,11 @@ impl Fall {
     }
 
     /// Last sample before the edge of a switch that closes.
-    fn edge(&self, trace: &Trace<'_>, start: usize) -> usize {
+    fn edge(&self, trace: &Trace<'_>, start: usize, levels: &Levels) -> usize {
         if self.half_s.is_finite() && self.half_s > RESOLVED * trace.samples.mean_interval_s() {
             return trace.samples.index_at(self.low_s - EDGE * self.half_s).saturating_sub(1).max(self.floor);
         }
-        edge_before(trace, self.crest, start)
+        edge_before(trace, self.crest, start, levels.noise_v)
     }
 
     /// Whether it is faster than a ring of its own swing could be, whose steepest slope is its swing times its angular frequency.
@@ -215,8 +220,9 @@ fn runs(trace: &Trace<'_>, enter_v: f64, leave_v: f64) -> Vec<Run> {
     runs
 }
 
-/// Noise from second differences inside the longest runs, where the voltage is a straight line.
-fn noise(trace: &Trace<'_>, runs: &[Run]) -> f64 {
+/// Noise from second differences inside the longest runs, where the voltage is a straight line; `None` where no run is long
+/// enough to tell.
+fn noise(trace: &Trace<'_>, runs: &[Run]) -> Option<f64> {
     let longest = runs.iter().map(|run| run.end - run.start).max().unwrap_or(0);
     let mut differences = Vec::new();
     for run in runs.iter().filter(|run| (run.end - run.start) * 2 >= longest) {
@@ -230,11 +236,11 @@ fn noise(trace: &Trace<'_>, runs: &[Run]) -> f64 {
         }
     }
     if differences.is_empty() {
-        return 0.0;
+        return None;
     }
     let middle = differences.len() / 2;
     let (_, median, _) = differences.select_nth_unstable_by(middle, f64::total_cmp);
-    *median / (0.6745 * 6_f64.sqrt())
+    Some(*median / (0.6745 * 6_f64.sqrt()))
 }
 
 /// A ring that swings to zero takes at most this many times as long from its crest to the mean as from the mean to the lower
@@ -271,15 +277,11 @@ fn above_vs(trace: &Trace<'_>, from: usize, to: usize, mean_v: f64) -> f64 {
     (from..to).map(piece).sum()
 }
 
-/// Last sample before the steep part of a fall.
-fn edge_before(trace: &Trace<'_>, crest: usize, fall: usize) -> usize {
+/// Last sample that is surely before the steep part of a fall: the one after it may have caught its beginning.
+fn edge_before(trace: &Trace<'_>, crest: usize, fall: usize, noise_v: f64) -> usize {
     let drop = |index: usize| trace.volts[index] - trace.volts[index + 1];
     let last = (fall + 1).min(trace.len() - 1);
     let Some(steepest) = (crest..last).max_by(|&a, &b| drop(a).total_cmp(&drop(b))) else { return crest };
-    let limit = 0.15 * drop(steepest);
-    (crest..=steepest)
-        .rev()
-        .find(|&index| drop(index) < limit)
-        .map_or(crest, |index| index + 1)
-        .min(fall.saturating_sub(1))
+    let limit = (0.03 * drop(steepest)).max(6.0 * noise_v).min(0.15 * drop(steepest));
+    (crest..=steepest).rev().find(|&index| drop(index) < limit).unwrap_or(crest).min(fall.saturating_sub(1))
 }
