@@ -5,8 +5,12 @@
 //! one bench, its files and limits), `sequence` (the plan, step by step). Beside them `files` holds any file a user writes
 //! against what it should be. Analysing is the package
 //! [`ringstep_analysis`]. Keeping and showing: `record` (the run folder), `report`.
+//!
+//! [`guide`] says what the measured values mean and how they are found.
 
 pub mod files;
+#[doc = include_str!("guide/values.md")]
+pub mod guide {}
 pub mod instrument;
 pub mod record;
 pub mod report;

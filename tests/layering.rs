@@ -14,7 +14,7 @@ const LAYERS: [(&str, &[&str]); 9] = [
     ("instrument", &["transport", "scpi", "files"]),
     ("station", &["transport", "scpi", "instrument", "files", "ringstep_analysis"]),
     ("sequence", &["transport", "scpi", "instrument", "files", "station", "ringstep_analysis"]),
-    ("record", &["sequence::event", "instrument", "ringstep_analysis"]),
+    ("record", &["sequence::event", "sequence::samples_of", "instrument", "ringstep_analysis"]),
     ("report", &["record", "sequence::event", "station::CAUTIONS", "ringstep_analysis"]),
     ("cli", &["ringstep", "ringstep_analysis"]),
 ];
