@@ -5,6 +5,7 @@ mod by_hand;
 mod cli;
 mod dialects;
 mod drivers;
+mod end_to_end;
 mod files;
 mod fit;
 mod instruments;

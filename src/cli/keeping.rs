@@ -1,5 +1,6 @@
 //! The keeper of a run started from the command line: the run folder, and a line for each event to whoever watches.
 
+use super::output;
 use indicatif::{ProgressBar, ProgressStyle};
 use ringstep::{
     record::RunWriter,
@@ -89,7 +90,7 @@ impl Progress {
     fn show(&self, event: &Event) {
         match (self, sentence(event)) {
             (Self::Quiet, _) | (_, None) => {}
-            (Self::Lines, Some((text, true))) => eprintln!("{text}"),
+            (Self::Lines, Some((text, true))) => output::note(&text),
             (Self::Lines, Some((_, false))) => {}
             (Self::Bar(bar), Some((text, lasting))) => {
                 bar.set_message(text.clone());

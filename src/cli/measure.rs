@@ -28,6 +28,7 @@ use std::{
     sync::Arc,
     time::Duration,
 };
+use tokio::signal::unix::{SignalKind, signal};
 
 /// Longest wait for the links to close.
 const CLOSING: Duration = Duration::from_secs(2);
@@ -128,7 +129,7 @@ impl Finished {
 pub(super) fn execute(inputs: &Inputs, request: &Request<'_>) -> Result<Finished, CliError> {
     let checks = preflight(&inputs.station, &inputs.board, &inputs.plan, request.attendance);
     if !request.quiet {
-        eprintln!("{}\n\n{}\n", output::cautions(), preflight_table(&checks));
+        output::note(&format!("{}\n\n{}\n", output::cautions(), preflight_table(&checks)));
     }
     let refused: Vec<&PreflightCheck> = checks.iter().filter(|check| !check.passed).collect();
     if !refused.is_empty() {
@@ -219,17 +220,19 @@ fn ended(keeper: &mut FolderKeeper, outcome: Outcome, message: String) -> Result
     Ok((outcome, message))
 }
 
-/// Raises the stop on Ctrl-C and on a termination signal.
+/// Raises the stop on Ctrl-C, on a termination signal and when the terminal goes away.
 async fn raise_on_signals(stopper: Stopper) {
-    let terminated = async {
-        match tokio::signal::unix::signal(tokio::signal::unix::SignalKind::terminate()) {
+    let came = |kind: SignalKind| async move {
+        match signal(kind) {
             Ok(mut signal) => signal.recv().await,
             Err(_) => std::future::pending().await,
         }
     };
     tokio::select! {
-        _ = tokio::signal::ctrl_c() => {}
-        _ = terminated => {}
+        _ = came(SignalKind::interrupt()) => {}
+        _ = came(SignalKind::terminate()) => {}
+        _ = came(SignalKind::hangup()) => {}
+        _ = came(SignalKind::quit()) => {}
     }
     stopper.raise();
 }

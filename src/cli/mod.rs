@@ -88,7 +88,7 @@ pub(crate) fn main() -> ExitCode {
             if arguments.command.json() {
                 output::json(&error.to_json());
             }
-            eprintln!("{}", error.render(output::styled(&std::io::stderr())));
+            output::note(&error.render(output::styled(&std::io::stderr())));
             error.exit().into()
         }
     }
@@ -104,5 +104,10 @@ fn log(verbose: u8) {
     let filter = EnvFilter::builder().with_env_var(LOG_VARIABLE).try_from_env();
     let filter = filter.unwrap_or_else(|_| EnvFilter::new(format!("warn,ringstep={usual}")));
     let styled = output::styled(&std::io::stderr());
-    tracing_subscriber::fmt().with_env_filter(filter).with_ansi(styled).with_writer(std::io::stderr).init();
+    tracing_subscriber::fmt()
+        .with_env_filter(filter)
+        .with_ansi(styled)
+        .log_internal_errors(false)
+        .with_writer(std::io::stderr)
+        .init();
 }

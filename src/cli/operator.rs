@@ -9,7 +9,7 @@ pub(super) struct Terminal;
 impl Operator for Terminal {
     fn ask<'a>(&'a self, prompt: &'a str) -> Pin<Box<dyn Future<Output = Option<String>> + Send + 'a>> {
         Box::pin(async move {
-            eprintln!("{prompt}");
+            super::output::note(prompt);
             let read = tokio::task::spawn_blocking(|| {
                 let mut line = String::new();
                 let count = std::io::stdin().lock().read_line(&mut line).unwrap_or(0);

@@ -15,6 +15,11 @@ pub(crate) fn line(text: &str) {
     let _ = writeln!(std::io::stdout(), "{text}");
 }
 
+/// Tells whoever watches one thing on the standard error; nobody watching is no error, least of all while something is energised.
+pub(crate) fn note(text: &str) {
+    let _ = writeln!(std::io::stderr(), "{text}");
+}
+
 /// Prints one JSON value.
 pub(crate) fn json(value: &Value) {
     line(&format!("{value:#}"));

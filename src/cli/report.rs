@@ -46,10 +46,12 @@ impl Report {
             return Ok(Exit::Done);
         }
         if let Some(torn) = torn {
-            eprintln!("{torn}");
+            output::note(&torn);
         }
         if !run.finished() {
-            eprintln!("the run has no end: it was interrupted, and whether source and load went off is not recorded");
+            output::note(
+                "the run has no end: it was interrupted, and whether source and load went off is not recorded",
+            );
         }
         if !results.points.is_empty() {
             output::line(&values_table(&results));

@@ -100,6 +100,9 @@ pub enum RunError {
         /// Why.
         reason: String,
     },
+    /// The program itself is at fault; safe-off is reached all the same.
+    #[error("a defect of the program ended the run ({0}); please report it with the run folder")]
+    Defect(String),
     /// The operator stopped the run.
     #[error("stopped by the operator")]
     Stopped,

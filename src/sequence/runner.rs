@@ -7,6 +7,8 @@ use super::{
     event::{Event, Outcome},
 };
 use crate::station::{Board, Connected, Station};
+use futures_util::FutureExt;
+use std::{any::Any, panic::AssertUnwindSafe};
 
 /// What a run is to do, on which station, with which board.
 #[derive(Debug, Clone)]
@@ -43,7 +45,9 @@ pub async fn run(
     let ended = tokio::select! {
         biased;
         () = stop.raised() => Err(RunError::Stopped),
-        ended = points(job, connected, keeper) => ended,
+        ended = AssertUnwindSafe(points(job, connected, keeper)).catch_unwind() => {
+            ended.unwrap_or_else(|panic| Err(RunError::Defect(panicked(panic.as_ref()))))
+        }
     };
     let off = connected.safe_off.off().await;
     let (outcome, message) = match ended {
@@ -64,6 +68,11 @@ pub async fn run(
     })?;
     keeper.event(&Event::RunEnded { outcome, message: message.clone() })?;
     Ok((outcome, message))
+}
+
+fn panicked(panic: &(dyn Any + Send)) -> String {
+    let text = panic.downcast_ref::<&str>().map(|text| (*text).to_owned());
+    text.or_else(|| panic.downcast_ref::<String>().cloned()).unwrap_or_else(|| "no reason given".to_owned())
 }
 
 /// Measures every point; returns how many were measured and how many refused.
