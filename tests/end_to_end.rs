@@ -43,7 +43,8 @@ fn ended(scratch: tempfile::TempDir, child: Child) -> Ended {
     let said = String::from_utf8_lossy(&output.stdout).into_owned() + &String::from_utf8_lossy(&output.stderr);
     let run = Run::open(&scratch.path().join("run")).unwrap_or_else(|error| panic!("{error}: {said}"));
     let truth = fs::read_to_string(scratch.path().join("truth.jsonl")).unwrap();
-    let mut states = truth.lines().filter_map(|line| serde_json::from_str::<Value>(line).unwrap().get("state").cloned());
+    let mut states =
+        truth.lines().filter_map(|line| serde_json::from_str::<Value>(line).unwrap().get("state").cloned());
     let last = states.next_back().unwrap();
     let on = ["source_on", "load_on"].map(|key| last[key].as_bool().unwrap());
     Ended { code: output.status.code(), said, results: run.results(), run, on, _scratch: scratch }

@@ -157,6 +157,7 @@ fn findings(purpose: Purpose, bulk_v: f64) -> Findings {
 fn values(line_v: f64) -> PointValues {
     let bulk_v = BULK_V * line_v / 115.0;
     PointValues {
+        leakage_captures: Vec::new(),
         relaxation_frequency_hz: Some(measured(RELAXATION_HZ, 2e-4)),
         relaxation_quality_factor: Some(measured(17.87, 0.012)),
         leakage_frequency_hz: Some(measured(LEAKAGE_HZ, 1e-3)),

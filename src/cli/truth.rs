@@ -4,7 +4,7 @@
 use super::{error::CliError, output};
 use ringstep::{
     record::{Results, Run, results::PointResult},
-    sequence::event::Purpose,
+    sequence::event::{Capture, Purpose},
 };
 use ringstep_analysis::quantity::{Measured, Unit};
 use serde::Deserialize;
@@ -51,13 +51,13 @@ impl Truths {
     }
 
     fn of_point(&self, run: &Run, point: &PointResult) -> PointTruth {
-        let of = |purpose: Purpose| -> Vec<&Acquisition> {
-            let captures = run.captures().filter(|capture| capture.point == point.index && capture.purpose == purpose);
+        let of = |wanted: &dyn Fn(&Capture) -> bool| -> Vec<&Acquisition> {
+            let captures = run.captures().filter(|capture| wanted(capture));
             let numbers: Vec<u64> = captures.map(|capture| capture.waveform.acquisition).collect();
             self.0.iter().filter(|acquisition| numbers.contains(&acquisition.number)).collect()
         };
-        let relaxation = of(Purpose::RelaxationRing);
-        let leakage = of(Purpose::LeakageRing);
+        let relaxation = of(&|capture| capture.point == point.index && capture.purpose == Purpose::RelaxationRing);
+        let leakage = of(&|capture| point.values.leakage_captures.contains(&capture.number));
         let rings = relaxation.iter().flat_map(|acquisition| &acquisition.relaxation_rings);
         let leaks = leakage.iter().flat_map(|acquisition| &acquisition.leakage_rings);
         PointTruth {

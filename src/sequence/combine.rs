@@ -12,17 +12,24 @@ use ringstep_analysis::{
 pub(super) struct Captured<'a> {
     pub(super) survey: &'a Survey,
     pub(super) relaxation: &'a [(usize, Findings)],
+    /// At the load start.
     pub(super) leakage: &'a [(usize, Findings)],
 }
 
 /// Puts the captures of one point together.
 pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValues {
     let relaxation = ring(captured.relaxation, |findings| findings.relaxation_ring);
-    let leakage = ring(captured.leakage, |findings| findings.leakage_ring);
+    let leakage_from = leakage_from(captured);
+    let leakage = ring(leakage_from, |findings| findings.leakage_ring);
     let node = relaxation.zip(facts.primary_inductance_h).map(|(ring, l)| circuit::node_capacitance(&ring, l));
     let both = || captured.relaxation.iter().chain(captured.leakage);
     let peaks = both().filter_map(|(_, findings)| findings.peak_drain_voltage_v);
     PointValues {
+        leakage_captures: if leakage.is_some() {
+            leakage_from.iter().map(|(number, _)| *number).collect()
+        } else {
+            Vec::new()
+        },
         relaxation_frequency_hz: relaxation.map(|ring| ring.frequency_hz),
         relaxation_quality_factor: relaxation.map(|ring| ring.quality_factor),
         leakage_frequency_hz: leakage.map(|ring| ring.frequency_hz),
@@ -35,6 +42,12 @@ pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValue
         peak_drain_voltage_v: peaks.reduce(|a, b| if b.value > a.value { b } else { a }),
         turn_on_rate_hz: captured.survey.findings.turn_on_rate_hz,
     }
+}
+
+/// The captures that the leakage ring is taken from: those of the relaxation ring if half of them hold one.
+fn leakage_from<'a>(captured: &Captured<'a>) -> &'a [(usize, Findings)] {
+    let held = captured.relaxation.iter().filter(|(_, findings)| findings.leakage_ring.is_some()).count();
+    if 2 * held >= captured.relaxation.len() { captured.relaxation } else { captured.leakage }
 }
 
 fn ring(findings: &[(usize, Findings)], pick: fn(&Findings) -> Option<Ring>) -> Option<Ring> {

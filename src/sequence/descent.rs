@@ -13,6 +13,8 @@ use crate::instrument::LoadReading;
 const STEP: f64 = 0.6;
 /// Below this share of the load start the next step goes straight to the floor.
 const LAST_SHARE: f64 = 0.02;
+/// Long rings that a survey must show above the load floor: a single one is too rare to be met again in a shorter window.
+const LONG_RINGS: usize = 3;
 /// Halvings of the interval in which the boundary load lies.
 const REFINEMENTS: usize = 2;
 
@@ -41,14 +43,16 @@ impl Bench<'_> {
         let mut without_skips_a = None;
         loop {
             self.stepped(&survey, load)?;
-            if survey.visible_ring_periods().is_some_and(|periods| periods >= self.job.plan.ring_periods) {
+            let long = survey.rings_of(self.job.plan.ring_periods);
+            let floor = self.load_a <= self.job.plan.load_floor_a;
+            if long >= LONG_RINGS || (floor && long > 0) {
                 let boundary_load_a = self.refine_boundary(&survey, without_skips_a).await?;
                 return Ok(Stepped::Visible(Box::new(Descent { survey, load, boundary_load_a })));
             }
             if survey.modes()[2] == 0 {
                 without_skips_a = Some(self.load_a);
             }
-            if self.load_a <= self.job.plan.load_floor_a {
+            if floor {
                 return Ok(Stepped::Refused(self.why_not_visible(&survey)));
             }
             (survey, load) = self.survey_at(self.next_load_a()).await?;

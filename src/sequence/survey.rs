@@ -52,6 +52,14 @@ impl Survey {
         self.whole_cycles().filter_map(ring_time_s).reduce(f64::max)
     }
 
+    /// How many cycles leave the ring that many periods; none where it was not fitted.
+    pub(super) fn rings_of(&self, periods: f64) -> usize {
+        let Some(ring) = self.findings.relaxation_ring else { return 0 };
+        let long =
+            |cycle: &&Cycle| ring_time_s(cycle).is_some_and(|ring_s| ring_s * ring.frequency_hz.value >= periods);
+        self.whole_cycles().filter(long).count()
+    }
+
     /// Ring periods in the longest gap, where the ring was fitted.
     pub(super) fn visible_ring_periods(&self) -> Option<f64> {
         Some(self.longest_ring_s()? * self.findings.relaxation_ring?.frequency_hz.value)
