@@ -11,13 +11,19 @@ use std::{
     io::{BufRead, BufReader},
     path::{Path, PathBuf},
     process::{Child, Command, Stdio},
-    sync::OnceLock,
+    sync::{Mutex, MutexGuard, OnceLock},
     thread,
     time::{Duration, Instant, SystemTime},
 };
 
 /// From the moment a failure is noticed to the confirmation that the source is off.
 const OFF_WITHIN_S: f64 = 1.0;
+
+/// These runs hold deadlines: they don't compete with each other for the processor.
+fn alone() -> MutexGuard<'static, ()> {
+    static ALONE: Mutex<()> = Mutex::new(());
+    ALONE.lock().unwrap_or_else(|poisoned| poisoned.into_inner())
+}
 
 /// A run of the demonstration that has ended.
 struct Ended {
@@ -132,11 +138,13 @@ fn fails_in_order(instrument: &str, kind: &str) {
 
 #[test]
 fn a_scope_whose_plug_is_pulled_leaves_everything_off() {
+    let _alone = alone();
     fails_in_order("scope", "gone");
 }
 
 #[test]
 fn a_load_whose_plug_is_pulled_leaves_the_source_off_and_is_not_called_off() {
+    let _alone = alone();
     let ended = with_fault(&format!("load:gone@{}", message_in_the_second_point("load")));
     left_in_order(&ended, "load");
     assert!(!ended.on[0], "{}", ended.said);
@@ -150,6 +158,7 @@ fn a_load_whose_plug_is_pulled_leaves_the_source_off_and_is_not_called_off() {
 
 #[test]
 fn a_source_whose_plug_is_pulled_is_not_called_off_and_the_operator_is_told() {
+    let _alone = alone();
     let ended = with_fault(&format!("source:gone@{}", message_in_the_second_point("source")));
     left_in_order(&ended, "source");
     assert!(!ended.on[1], "the load is off: {}", ended.said);
@@ -159,26 +168,31 @@ fn a_source_whose_plug_is_pulled_is_not_called_off_and_the_operator_is_told() {
 
 #[test]
 fn a_source_whose_link_drops_is_reached_again_to_switch_it_off() {
+    let _alone = alone();
     fails_in_order("source", "drop");
 }
 
 #[test]
 fn a_scope_that_answers_garbage_ends_the_run_with_everything_off() {
+    let _alone = alone();
     fails_in_order("scope", "garbage");
 }
 
 #[test]
 fn a_load_that_answers_garbage_ends_the_run_with_everything_off() {
+    let _alone = alone();
     fails_in_order("load", "garbage");
 }
 
 #[test]
 fn a_source_that_answers_garbage_ends_the_run_with_everything_off() {
+    let _alone = alone();
     fails_in_order("source", "garbage");
 }
 
 #[test]
 fn a_scope_that_falls_silent_ends_the_run_with_everything_off() {
+    let _alone = alone();
     fails_in_order("scope", "silent");
 }
 
@@ -219,21 +233,25 @@ fn stopped_by(name: &str) {
 
 #[test]
 fn an_interrupt_ends_the_run_with_everything_off() {
+    let _alone = alone();
     stopped_by("INT");
 }
 
 #[test]
 fn a_termination_ends_the_run_with_everything_off() {
+    let _alone = alone();
     stopped_by("TERM");
 }
 
 #[test]
 fn a_closed_terminal_ends_the_run_with_everything_off() {
+    let _alone = alone();
     stopped_by("HUP");
 }
 
 #[test]
 fn a_killed_run_leaves_its_finished_points_readable() {
+    let _alone = alone();
     let (scratch, mut child) = with_one_point();
     child.kill().unwrap();
     child.wait().unwrap();
@@ -244,6 +262,7 @@ fn a_killed_run_leaves_its_finished_points_readable() {
 
 #[test]
 fn a_reader_that_goes_away_does_not_keep_the_source_on() {
+    let _alone = alone();
     let scratch = tempfile::tempdir().unwrap();
     let mut child = demo(scratch.path(), &[]).spawn().unwrap();
     let mut line = String::new();
@@ -256,6 +275,7 @@ fn a_reader_that_goes_away_does_not_keep_the_source_on() {
 
 #[test]
 fn a_folder_that_cannot_be_written_refuses_before_anything_is_energised() {
+    let _alone = alone();
     let scratch = tempfile::tempdir().unwrap();
     let folder: PathBuf = scratch.path().join("run");
     fs::write(&folder, "in the way").unwrap();

@@ -241,9 +241,20 @@ impl Findings {
     }
 
     /// Of one kind of doubt the first is told: rings of one record differ in figures, not in what is to be done.
-    fn add(&mut self, doubt: Doubt) {
+    fn add(&mut self, mut doubt: Doubt) {
+        as_sentence(&mut doubt.sentence);
         if self.doubts.iter().all(|known| known.name != doubt.name) {
             self.doubts.push(doubt);
         }
+    }
+}
+
+/// A capital at the beginning and a full stop at the end.
+fn as_sentence(text: &mut String) {
+    if let Some(first) = text.chars().next() {
+        text.replace_range(..first.len_utf8(), &first.to_uppercase().to_string());
+    }
+    if !text.ends_with('.') {
+        text.push('.');
     }
 }

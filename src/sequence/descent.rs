@@ -132,7 +132,7 @@ impl Bench<'_> {
             ),
             None => {
                 let doubts: Vec<&str> = survey.findings.doubts.iter().map(|doubt| doubt.sentence.as_str()).collect();
-                format!("no relaxation ring could be fitted {at}: {}", doubts.join(" "))
+                format!("no relaxation ring could be fitted {at}. {}", doubts.join(" "))
             }
         }
     }

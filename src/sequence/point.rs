@@ -40,7 +40,7 @@ impl Bench<'_> {
         let measured = values.relaxation_frequency_hz.is_some();
         if !measured {
             let reason = doubts_of(&relaxation);
-            let reason = format!("none of {} captures held a relaxation ring that fits: {reason}", relaxation.len());
+            let reason = format!("none of {} captures held a relaxation ring that fits. {reason}", relaxation.len());
             self.keeper.event(&Event::PointRefused { index, line_v, reason })?;
             return Ok(false);
         }
