@@ -19,17 +19,12 @@ pub(super) struct Captured<'a> {
 /// Puts the captures of one point together.
 pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValues {
     let relaxation = ring(captured.relaxation, |findings| findings.relaxation_ring);
-    let leakage_from = leakage_from(captured);
-    let leakage = ring(leakage_from, |findings| findings.leakage_ring);
+    let (leakage, leakage_captures) = leakage_ring(captured).unzip();
     let node = relaxation.zip(facts.primary_inductance_h).map(|(ring, l)| circuit::node_capacitance(&ring, l));
     let both = || captured.relaxation.iter().chain(captured.leakage);
     let peaks = both().filter_map(|(_, findings)| findings.peak_drain_voltage_v);
     PointValues {
-        leakage_captures: if leakage.is_some() {
-            leakage_from.iter().map(|(number, _)| *number).collect()
-        } else {
-            Vec::new()
-        },
+        leakage_captures: leakage_captures.unwrap_or_default(),
         relaxation_frequency_hz: relaxation.map(|ring| ring.frequency_hz),
         relaxation_quality_factor: relaxation.map(|ring| ring.quality_factor),
         leakage_frequency_hz: leakage.map(|ring| ring.frequency_hz),
@@ -44,10 +39,15 @@ pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValue
     }
 }
 
-/// The captures that the leakage ring is taken from: those of the relaxation ring if half of them hold one.
-fn leakage_from<'a>(captured: &Captured<'a>) -> &'a [(usize, Findings)] {
-    let held = captured.relaxation.iter().filter(|(_, findings)| findings.leakage_ring.is_some()).count();
-    if 2 * held >= captured.relaxation.len() { captured.relaxation } else { captured.leakage }
+/// The leakage ring with the captures it is taken from, at the load where it is known best: at the load start it is large, but
+/// the clamp may conduct again on later crests; at the measuring load it is clean, but small.
+fn leakage_ring(captured: &Captured<'_>) -> Option<(Ring, Vec<usize>)> {
+    let sets = [captured.relaxation, captured.leakage].into_iter();
+    let rings = sets.filter_map(|set| Some((ring(set, |findings| findings.leakage_ring)?, set)));
+    let best = rings.min_by(|(a, _), (b, _)| {
+        a.frequency_hz.relative_uncertainty().total_cmp(&b.frequency_hz.relative_uncertainty())
+    });
+    best.map(|(ring, set)| (ring, set.iter().map(|(number, _)| *number).collect()))
 }
 
 fn ring(findings: &[(usize, Findings)], pick: fn(&Findings) -> Option<Ring>) -> Option<Ring> {

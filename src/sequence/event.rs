@@ -181,8 +181,7 @@ pub struct PointValues {
     pub relaxation_frequency_hz: Option<Measured>,
     /// Quality factor of the relaxation ring.
     pub relaxation_quality_factor: Option<Measured>,
-    /// Captures whose leakage rings were used: those at the measuring load, where the node's capacitance is that of the
-    /// relaxation ring and the clamp conducts least, or else those at the load start.
+    /// Captures whose leakage rings were used: those at the load start or those at the measuring load, whichever tell it better.
     #[serde(default)]
     pub leakage_captures: Vec<usize>,
     /// Undamped leakage-ring frequency.
