@@ -6,6 +6,8 @@ mod need;
 
 mod acceptance;
 mod circuit;
+mod cycles;
+mod drain;
 mod fit;
 mod generate;
 mod quantity;
