@@ -81,7 +81,7 @@ async fn scope(spoil: impl Fn(&str, String) -> Option<String> + Send + 'static) 
 }
 
 const RANGE: Vertical = Vertical { bottom_v: -50.0, top_v: 550.0 };
-const WINDOW: Horizontal = Horizontal { window_s: 10e-6, start_s: -1e-6 };
+const WINDOW: Horizontal = Horizontal { window_s: 10e-6, start_s: -1e-6, interval_s: None };
 const TRIGGER: Trigger = Trigger { level_v: 100.0, slope: Slope::Rising, holdoff_s: 0.0 };
 
 /// The kind of the first refusal on the way to a record; `None` where the record came.

@@ -100,7 +100,7 @@ async fn every_role_is_recognised_and_says_that_it_is_simulated() {
 async fn an_eight_bit_scope_sends_bytes_with_the_scale_that_was_asked_for() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = energised(&bench).await;
-    let waveform = captured(&mut connected, Horizontal { window_s: 40e-6, start_s: -4e-6 }).await;
+    let waveform = captured(&mut connected, Horizontal { window_s: 40e-6, start_s: -4e-6, interval_s: None }).await;
     assert_eq!(waveform.format, SampleFormat::U8);
     assert_eq!(waveform.payload.len(), (10.0 * 5e-6 * 1e9) as usize, "5 us a division at a full 1 GS/s");
     assert!((waveform.time_origin_s + 4e-6).abs() < 2.0 * waveform.interval_s);
@@ -112,10 +112,23 @@ async fn an_eight_bit_scope_sends_bytes_with_the_scale_that_was_asked_for() {
 }
 
 #[tokio::test(flavor = "multi_thread", worker_threads = 2)]
+async fn no_more_memory_is_used_than_the_interval_asked_for_takes() {
+    let bench = Bench::start(Options::default()).await;
+    let mut connected = energised(&bench).await;
+    // Depths come in steps of ten and windows in steps of 1, 2 and 5.
+    for (longest_s, points) in [(50e-9, 10_000), (40e-9, 100_000), (1e-9, 500_000)] {
+        let horizontal = Horizontal { window_s: 480e-6, start_s: -48e-6, interval_s: Some(longest_s) };
+        let waveform = captured(&mut connected, horizontal).await;
+        assert!(waveform.interval_s <= 1.001 * longest_s, "{} where {longest_s} was asked for", waveform.interval_s);
+        assert_eq!(waveform.payload.len(), points, "for {longest_s} s");
+    }
+}
+
+#[tokio::test(flavor = "multi_thread", worker_threads = 2)]
 async fn a_twelve_bit_scope_sends_words() {
     let bench = Bench::start(Options { scope_bits: 12, ..Options::default() }).await;
     let mut connected = energised(&bench).await;
-    let waveform = captured(&mut connected, Horizontal { window_s: 100e-6, start_s: -10e-6 }).await;
+    let waveform = captured(&mut connected, Horizontal { window_s: 100e-6, start_s: -10e-6, interval_s: None }).await;
     assert_eq!(waveform.format, SampleFormat::U16Be);
     let codes: Vec<u16> = waveform.payload.chunks_exact(2).map(|pair| u16::from_be_bytes([pair[0], pair[1]])).collect();
     assert!(codes.iter().any(|code| code & 0x00F0 != 0), "the lower four bits of twelve are used");
@@ -126,7 +139,7 @@ async fn a_twelve_bit_scope_sends_words() {
 async fn a_record_that_is_not_new_is_refused() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = energised(&bench).await;
-    captured(&mut connected, Horizontal { window_s: 40e-6, start_s: -4e-6 }).await;
+    captured(&mut connected, Horizontal { window_s: 40e-6, start_s: -4e-6, interval_s: None }).await;
     connected.source.off().await.unwrap();
     sleep(Duration::from_millis(500)).await;
     connected.scope.arm().await.unwrap();
@@ -181,7 +194,7 @@ async fn what_an_instrument_reports_names_the_command() {
 async fn every_message_is_logged_and_a_block_by_its_checksum() {
     let bench = Bench::start(Options::default()).await;
     let mut connected = energised(&bench).await;
-    let waveform = captured(&mut connected, Horizontal { window_s: 40e-6, start_s: -4e-6 }).await;
+    let waveform = captured(&mut connected, Horizontal { window_s: 40e-6, start_s: -4e-6, interval_s: None }).await;
     let entries = bench.exchanges.take();
     let blocks: Vec<_> = entries.iter().filter_map(|entry| entry.block.as_ref()).collect();
     assert_eq!(blocks.len(), 1);

@@ -17,4 +17,5 @@ mod record;
 mod report;
 mod safe_off;
 mod scpi;
+mod seeds;
 mod transport;

@@ -3,6 +3,9 @@
 use serde::{Deserialize, Serialize};
 use std::fmt;
 
+/// Coverage factor of a 95 % interval of a normal distribution (JCGM 100:2008, table G.1).
+pub const COVERAGE_95: f64 = 1.959_964;
+
 /// A value in SI units with its standard uncertainty (JCGM 100), in the same unit.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
 pub struct Measured {
@@ -36,23 +39,24 @@ impl Measured {
 
     /// `"82.4 pF +- 1.8 pF"` with the half-width of the 95 % interval of a normal distribution behind the sign.
     pub fn text_with_95_percent_interval(self, unit: Unit) -> String {
-        self.text(unit, 1.959_964 * self.standard_uncertainty)
+        self.text(unit, COVERAGE_95 * self.standard_uncertainty)
     }
 
     fn text(self, unit: Unit, half_width: f64) -> String {
         if !(self.value.is_finite() && half_width.is_finite()) {
-            return format!("{} {unit}", self.value);
+            return format!("{} {unit}", self.value).trim_end().to_owned();
         }
         let (prefix, scale) = unit.prefix_for(self.value.abs().max(half_width));
+        let unit = if unit == Unit::One { String::new() } else { format!(" {prefix}{unit}") };
         let (value, half_width) = (self.value / scale, half_width / scale);
         if half_width == 0.0 {
-            return format!("{} {prefix}{unit}", trimmed(value));
+            return format!("{}{unit}", trimmed(value));
         }
         let last = last_digit(half_width);
         let decimals = usize::try_from(-last).unwrap_or(0);
         let coarse = 10f64.powi(last.max(0));
         let round = |x: f64| if last > 0 { (x / coarse).round() * coarse } else { x };
-        format!("{:.decimals$} {prefix}{unit} +- {:.decimals$} {prefix}{unit}", round(value), round(half_width))
+        format!("{:.decimals$}{unit} +- {:.decimals$}{unit}", round(value), round(half_width))
     }
 }
 
@@ -97,6 +101,8 @@ pub enum Unit {
     DegreeCelsius,
     /// A ratio, written in per cent: `"5 %"` is 0.05.
     Percent,
+    /// A bare number, such as a quality factor.
+    One,
 }
 
 impl Unit {
@@ -113,11 +119,12 @@ impl Unit {
             Self::Kelvin => &["K"],
             Self::DegreeCelsius => &["degC", "\u{b0}C"],
             Self::Percent => &["%"],
+            Self::One => &[""],
         }
     }
 
     fn takes_prefix(self) -> bool {
-        !matches!(self, Self::Percent | Self::DegreeCelsius)
+        !matches!(self, Self::Percent | Self::DegreeCelsius | Self::One)
     }
 
     /// What one written unit is worth.

@@ -40,6 +40,9 @@ pub(crate) struct Demo {
     /// Run folder to write; it must be new or empty. [default: runs/DATE-TIME-BOARD]
     #[arg(long, value_name = "FOLDER")]
     out: Option<PathBuf>,
+    /// Keep the true values of every capture in this file, one JSON line each.
+    #[arg(long, value_name = "FILE")]
+    truth: Option<PathBuf>,
     /// Print one JSON object at the end, nothing else.
     #[arg(long)]
     pub(crate) json: bool,
@@ -49,7 +52,7 @@ impl Demo {
     /// Runs the command.
     pub(crate) fn run(&self) -> Result<Exit, CliError> {
         let scratch = tempfile::tempdir().map_err(|source| unwritable("the system's temporary folder", source))?;
-        let truth = scratch.path().join("truth.jsonl");
+        let truth = self.truth.clone().unwrap_or_else(|| scratch.path().join("truth.jsonl"));
         let bench = BenchProcess::start(&self.bench_options(&truth))?;
         let inputs = self.inputs(&bench.announcement, scratch.path())?;
         let request = Request {

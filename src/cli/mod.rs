@@ -14,6 +14,7 @@ mod measure;
 mod operator;
 mod output;
 mod recording;
+mod report;
 mod simulate;
 mod table;
 mod truth;
@@ -46,6 +47,7 @@ enum Command {
     Check(check::Check),
     Measure(measure::Measure),
     Fit(fit::Fit),
+    Report(report::Report),
     Drivers(drivers::DriversCommand),
     Simulate(simulate::Simulate),
 }
@@ -57,6 +59,7 @@ impl Command {
             Self::Check(check) => check.run(),
             Self::Measure(measure) => measure.run(),
             Self::Fit(fit) => fit.run(),
+            Self::Report(report) => report.run(),
             Self::Drivers(drivers) => drivers.run(),
             Self::Simulate(simulate) => simulate.run(),
         }
@@ -69,6 +72,7 @@ impl Command {
             Self::Check(check) => check.json,
             Self::Measure(measure) => measure.json,
             Self::Fit(fit) => fit.json,
+            Self::Report(report) => report.json,
             Self::Drivers(_) | Self::Simulate(_) => false,
         }
     }

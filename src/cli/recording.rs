@@ -26,13 +26,13 @@ pub(crate) struct RecordingOptions {
     #[arg(long, value_name = "S", value_parser = interval)]
     interval: Option<f64>,
     /// Time of the first sample, in seconds or with its unit.
-    #[arg(long, value_name = "S", value_parser = seconds, allow_negative_numbers = true)]
+    #[arg(long, value_name = "S", value_parser = seconds, allow_hyphen_values = true)]
     start: Option<f64>,
     /// Volts a unit of the file: volts = scale * sample + offset.
-    #[arg(long, value_name = "X", default_value_t = 1.0, value_parser = finite, allow_negative_numbers = true)]
+    #[arg(long, value_name = "X", default_value_t = 1.0, value_parser = finite, allow_hyphen_values = true)]
     scale: f64,
     /// Volts at sample value zero.
-    #[arg(long, value_name = "X", default_value_t = 0.0, value_parser = finite, allow_negative_numbers = true)]
+    #[arg(long, value_name = "X", default_value_t = 0.0, value_parser = finite, allow_hyphen_values = true)]
     offset: f64,
     /// Attenuation of a probe that the file does not account for.
     #[arg(long, value_name = "X", default_value_t = 1.0, value_parser = finite)]

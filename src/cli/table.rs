@@ -19,29 +19,25 @@ pub(super) fn values_table(results: &Results) -> String {
     )
 }
 
-fn text(value: Option<Measured>, unit: Option<Unit>) -> String {
-    match (value, unit) {
-        (None, _) => "-".to_owned(),
-        (Some(value), Some(unit)) => value.text_with_95_percent_interval(unit),
-        (Some(value), None) => format!("{:.2} +- {:.2}", value.value, 2.0 * value.standard_uncertainty),
-    }
+fn text(value: Option<Measured>, unit: Unit) -> String {
+    value.map_or_else(|| "-".to_owned(), |value| value.text_with_95_percent_interval(unit))
 }
 
-/// Name, unit where there is one, and where the value stands.
-type Row = (&'static str, Option<Unit>, fn(&PointValues) -> Option<Measured>);
+/// Name, unit, and where the value stands.
+type Row = (&'static str, Unit, fn(&PointValues) -> Option<Measured>);
 
 fn rows() -> [Row; 11] {
     [
-        ("node capacitance", Some(Unit::Farad), |v| v.node_capacitance_f),
-        ("  without the probe", Some(Unit::Farad), |v| v.node_capacitance_without_probe_f),
-        ("leakage inductance", Some(Unit::Henry), |v| v.leakage_inductance_h),
-        ("relaxation ring", Some(Unit::Hertz), |v| v.relaxation_frequency_hz),
-        ("  quality factor", None, |v| v.relaxation_quality_factor),
-        ("leakage ring", Some(Unit::Hertz), |v| v.leakage_frequency_hz),
-        ("  quality factor", None, |v| v.leakage_quality_factor),
-        ("reflected voltage", Some(Unit::Volt), |v| v.reflected_voltage_v),
-        ("bulk voltage", Some(Unit::Volt), |v| v.bulk_voltage_v),
-        ("peak drain voltage", Some(Unit::Volt), |v| v.peak_drain_voltage_v),
-        ("turn-on rate", Some(Unit::Hertz), |v| v.turn_on_rate_hz),
+        ("node capacitance", Unit::Farad, |v| v.node_capacitance_f),
+        ("  without the probe", Unit::Farad, |v| v.node_capacitance_without_probe_f),
+        ("leakage inductance", Unit::Henry, |v| v.leakage_inductance_h),
+        ("relaxation ring", Unit::Hertz, |v| v.relaxation_frequency_hz),
+        ("  quality factor", Unit::One, |v| v.relaxation_quality_factor),
+        ("leakage ring", Unit::Hertz, |v| v.leakage_frequency_hz),
+        ("  quality factor", Unit::One, |v| v.leakage_quality_factor),
+        ("reflected voltage", Unit::Volt, |v| v.reflected_voltage_v),
+        ("bulk voltage", Unit::Volt, |v| v.bulk_voltage_v),
+        ("peak drain voltage", Unit::Volt, |v| v.peak_drain_voltage_v),
+        ("turn-on rate", Unit::Hertz, |v| v.turn_on_rate_hz),
     ]
 }

@@ -199,6 +199,7 @@ fn example(unit: Unit) -> &'static str {
         Unit::Kelvin => "5 K",
         Unit::DegreeCelsius => "25 degC",
         Unit::Percent => "90 %",
+        Unit::One => "12.5",
     }
 }
 

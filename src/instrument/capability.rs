@@ -41,6 +41,8 @@ pub struct Horizontal {
     pub window_s: f64,
     /// Time from the trigger to the start of the window; negative shows what came before the trigger.
     pub start_s: f64,
+    /// Longest sample interval that will do: no more memory is used than it takes. `None` asks for all the memory there is.
+    pub interval_s: Option<f64>,
 }
 
 /// Direction of an edge.

@@ -93,8 +93,22 @@ impl DialectScope {
     }
 
     async fn horizontal(&mut self, wanted: Horizontal) -> Result<Timing, InstrumentError> {
+        let all = f64::from(self.facts.memory_points);
+        let mut points = wanted.interval_s.map_or(all, |interval_s| (wanted.window_s / interval_s).ceil().min(all));
+        loop {
+            let timing = self.timing(wanted, points).await?;
+            // The window may have been widened and the memory rounded: ask for more until the interval is short enough.
+            if points >= all || wanted.interval_s.is_none_or(|longest_s| timing.interval_s <= 1.001 * longest_s) {
+                self.promised = Some(timing);
+                return Ok(timing);
+            }
+            points = (3.0 * points).min(all);
+        }
+    }
+
+    async fn timing(&mut self, wanted: Horizontal, points: f64) -> Result<Timing, InstrumentError> {
         let dialect = &self.dialect;
-        dialect.set_number("points", None, f64::from(self.facts.memory_points)).await?;
+        dialect.set_number("points", None, points).await?;
         let divisions = self.facts.horizontal_divisions;
         let mut scale_s = wanted.window_s / divisions;
         let mut window_s = 0.0;
@@ -121,9 +135,7 @@ impl DialectScope {
             let detail = format!("{points} points at {rate_hz} samples a second don't fill the window of {window_s} s");
             return Err(dialect.error(Kind::WrongRecord, detail));
         }
-        let timing = Timing { interval_s: 1.0 / rate_hz, points: points as usize };
-        self.promised = Some(timing);
-        Ok(timing)
+        Ok(Timing { interval_s: 1.0 / rate_hz, points: points as usize })
     }
 
     async fn trigger(&mut self, wanted: Trigger) -> Result<(), InstrumentError> {

@@ -92,7 +92,7 @@ pub(crate) fn decode(file: Vec<u8>) -> Result<RawWaveform, String> {
 }
 
 /// Integer codes of a payload.
-pub(crate) fn codes(waveform: &RawWaveform) -> Result<Vec<i32>, String> {
+fn codes(waveform: &RawWaveform) -> Result<Vec<i32>, String> {
     let bytes = &waveform.payload;
     let words = || -> Result<_, String> {
         let (words, rest) = bytes.as_chunks::<2>();

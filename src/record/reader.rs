@@ -8,8 +8,12 @@ use super::{
 };
 use crate::{
     instrument::RawWaveform,
-    sequence::event::{Capture, Event},
+    sequence::{
+        event::{Capture, Event},
+        samples_of,
+    },
 };
+use ringstep_analysis::waveform::Samples;
 use std::{
     fs,
     path::{Path, PathBuf},
@@ -121,13 +125,9 @@ impl Run {
     }
 
     /// A capture in volts at the probe tip, by the scale it was sent with.
-    pub fn read_volts(&self, number: usize) -> Result<Vec<f64>, RecordError> {
+    pub fn read_samples(&self, number: usize) -> Result<Samples, RecordError> {
         let waveform = self.read_capture(number)?;
-        let codes = capture_file::codes(&waveform)
-            .map_err(|reason| RecordError::broken(self.folder.join(capture_name(number)), reason))?;
-        let volts =
-            |code| (f64::from(code) - waveform.code_reference) * waveform.volts_per_code + waveform.volts_origin;
-        Ok(codes.into_iter().map(volts).collect())
+        samples_of(&waveform).map_err(|error| RecordError::broken(self.folder.join(capture_name(number)), error))
     }
 
     /// Adds a finished file, or replaces a derived one, and notes its checksum in the manifest.

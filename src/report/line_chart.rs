@@ -3,9 +3,9 @@
 use super::{
     axes::{Axes, Axis},
     svg::{Anchor, Svg},
-    text::{self, COVERAGE_95},
+    text,
 };
-use ringstep_analysis::quantity::{Measured, Unit};
+use ringstep_analysis::quantity::{COVERAGE_95, Measured, Unit};
 
 /// One series: its name and its values against line voltage.
 pub(super) type Series = (&'static str, Vec<(f64, Measured)>);
@@ -44,7 +44,7 @@ pub(super) fn draw(
     }
     let sentences = series.iter().flat_map(|(name, values)| {
         values.iter().map(move |(line_v, value)| {
-            format!("{name} at {}: {}", text::short(*line_v, "V"), text::with_interval(*value, Some(unit)))
+            format!("{name} at {}: {}", text::short(*line_v, "V"), text::with_interval(*value, unit))
         })
     });
     let description = sentences.collect::<Vec<_>>().join("; ");

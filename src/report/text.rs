@@ -6,38 +6,27 @@ use ringstep_analysis::{
     quantity::{Measured, Unit},
 };
 
-/// Coverage factor of a 95 % interval of a normal distribution (JCGM 100, table G.1).
-pub(super) const COVERAGE_95: f64 = 1.959_964;
-
-/// A quantity of the table: name, unit (`None` for a bare number), and where it stands.
-pub(super) type Quantity = (&'static str, Option<Unit>, fn(&PointValues) -> Option<Measured>);
+/// A quantity of the table: name, unit, and where it stands.
+pub(super) type Quantity = (&'static str, Unit, fn(&PointValues) -> Option<Measured>);
 
 /// Every quantity of a point, in the order of the table.
 pub(super) const QUANTITIES: [Quantity; 11] = [
-    ("Node capacitance, probe included", Some(Unit::Farad), |v| v.node_capacitance_f),
-    ("Node capacitance without the probe", Some(Unit::Farad), |v| v.node_capacitance_without_probe_f),
-    ("Leakage inductance", Some(Unit::Henry), |v| v.leakage_inductance_h),
-    ("Relaxation-ring frequency, undamped", Some(Unit::Hertz), |v| v.relaxation_frequency_hz),
-    ("Relaxation-ring Q", None, |v| v.relaxation_quality_factor),
-    ("Leakage-ring frequency, undamped", Some(Unit::Hertz), |v| v.leakage_frequency_hz),
-    ("Leakage-ring Q", None, |v| v.leakage_quality_factor),
-    ("Reflected voltage", Some(Unit::Volt), |v| v.reflected_voltage_v),
-    ("Bulk voltage", Some(Unit::Volt), |v| v.bulk_voltage_v),
-    ("Peak drain voltage", Some(Unit::Volt), |v| v.peak_drain_voltage_v),
-    ("Turn-on rate", Some(Unit::Hertz), |v| v.turn_on_rate_hz),
+    ("Node capacitance, probe included", Unit::Farad, |v| v.node_capacitance_f),
+    ("Node capacitance without the probe", Unit::Farad, |v| v.node_capacitance_without_probe_f),
+    ("Leakage inductance", Unit::Henry, |v| v.leakage_inductance_h),
+    ("Relaxation-ring frequency, undamped", Unit::Hertz, |v| v.relaxation_frequency_hz),
+    ("Relaxation-ring Q", Unit::One, |v| v.relaxation_quality_factor),
+    ("Leakage-ring frequency, undamped", Unit::Hertz, |v| v.leakage_frequency_hz),
+    ("Leakage-ring Q", Unit::One, |v| v.leakage_quality_factor),
+    ("Reflected voltage", Unit::Volt, |v| v.reflected_voltage_v),
+    ("Bulk voltage", Unit::Volt, |v| v.bulk_voltage_v),
+    ("Peak drain voltage", Unit::Volt, |v| v.peak_drain_voltage_v),
+    ("Turn-on rate", Unit::Hertz, |v| v.turn_on_rate_hz),
 ];
 
 /// `"92.4 pF ± 1.4 pF"`: the value and the half-width of its 95 % interval.
-pub(super) fn with_interval(value: Measured, unit: Option<Unit>) -> String {
-    match unit {
-        Some(unit) => tidy(&value.text_with_95_percent_interval(unit)),
-        // A percentage of a hundredth of the value is the value: the rounding rules are the same.
-        None => {
-            let hundredth =
-                Measured { value: value.value * 0.01, standard_uncertainty: value.standard_uncertainty * 0.01 };
-            with_interval(hundredth, Some(Unit::Percent)).replace(" %", "")
-        }
-    }
+pub(super) fn with_interval(value: Measured, unit: Unit) -> String {
+    tidy(&value.text_with_95_percent_interval(unit))
 }
 
 /// A bare quantity to four digits: `"1.25 µs"`.

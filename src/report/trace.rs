@@ -16,9 +16,9 @@ pub(super) struct Trace {
 
 impl Trace {
     pub(super) fn read(run: &Run, capture: &Capture) -> Result<Trace, RecordError> {
-        let (waveform, volts) = (&capture.waveform, run.read_volts(capture.number)?);
-        let start_s = waveform.time_origin_s - waveform.index_reference * waveform.interval_s;
-        Ok(Trace { start_s, interval_s: waveform.interval_s, volts })
+        let samples = run.read_samples(capture.number)?;
+        let interval_s = samples.mean_interval_s();
+        Ok(Trace { start_s: samples.start_s(), interval_s, volts: samples.volts().to_vec() })
     }
 
     pub(super) fn end_s(&self) -> f64 {

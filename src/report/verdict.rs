@@ -1,11 +1,11 @@
 //! The few figures a reader wants first: what was measured, and how far the drain stayed from its rating.
 
-use super::text::{self, COVERAGE_95, QUANTITIES};
+use super::text::{self, QUANTITIES};
 use crate::{
     record::{Results, Run, results::PointResult},
     sequence::event::Outcome,
 };
-use ringstep_analysis::quantity::{Measured, Unit, parse_quantity};
+use ringstep_analysis::quantity::{COVERAGE_95, Measured, Unit, parse_quantity};
 
 /// One key figure.
 #[derive(Debug)]
@@ -71,7 +71,7 @@ fn margin(point: &PointResult, peak: Measured, rating_v: f64) -> String {
     };
     format!(
         "The highest drain voltage, {} at {} line, is {share:.0} % of the {} rating: {found} it{}.",
-        text::with_interval(peak, Some(Unit::Volt)),
+        text::with_interval(peak, Unit::Volt),
         text::short(point.line_v, "V"),
         text::short(rating_v, "V"),
         if upper < rating_v { "" } else { "; look at the clamp before going on" }
@@ -92,7 +92,7 @@ pub(super) fn keys(results: &Results, board: &BoardWords) -> Vec<Key> {
         keys.push(Key {
             name: "Margin to the drain rating".to_owned(),
             remark: format!("{} rated, at {} line", text::short(rating_v, "V"), text::short(point.line_v, "V")),
-            ..split(margin, Some(Unit::Volt))
+            ..split(margin, Unit::Volt)
         });
     }
     keys
@@ -113,7 +113,7 @@ fn key(results: &Results, index: usize) -> Option<Key> {
     Some(Key { name: name.to_owned(), remark, ..split(value, unit) })
 }
 
-fn split(value: Measured, unit: Option<Unit>) -> Key {
+fn split(value: Measured, unit: Unit) -> Key {
     let text = text::with_interval(value, unit);
     let (value, interval) = text.split_once(" ±").map_or((text.as_str(), ""), |(value, interval)| (value, interval));
     let interval = if interval.is_empty() { String::new() } else { format!("±{interval}") };

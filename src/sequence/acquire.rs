@@ -4,9 +4,10 @@ use super::{
     RunError,
     bench::Bench,
     event::{Capture, Event, Purpose},
+    samples::samples_of,
 };
-use crate::instrument::{Horizontal, RawWaveform, SampleFormat, Trigger, Vertical};
-use ringstep_analysis::waveform::{CodeOrder, CodeScale, Codes, Samples, decode_codes};
+use crate::instrument::{Horizontal, Trigger, Vertical};
+use ringstep_analysis::waveform::Samples;
 use std::time::{Duration, Instant};
 
 /// How often a waiting acquisition is asked whether it is complete.
@@ -51,7 +52,8 @@ impl Bench<'_> {
             sha256: String::new(),
         })?;
         self.captures += 1;
-        let samples = samples_of(&capture.waveform).map_err(|reason| RunError::Unreadable { number, reason })?;
+        let samples = samples_of(&capture.waveform)
+            .map_err(|error| RunError::Unreadable { number, reason: error.to_string() })?;
         self.keeper.event(&Event::Captured(capture))?;
         self.check_drain_limit(&samples)?;
         Ok(Acquired { number, samples, vertical })
@@ -79,26 +81,4 @@ impl Bench<'_> {
         }
         Ok(())
     }
-}
-
-/// Scales the codes of an acquisition to samples at the probe tip.
-fn samples_of(waveform: &RawWaveform) -> Result<Samples, String> {
-    let (bytes, signed, order) = match waveform.format {
-        SampleFormat::U8 => (1, false, CodeOrder::BigEndian),
-        SampleFormat::I8 => (1, true, CodeOrder::BigEndian),
-        SampleFormat::U16Be => (2, false, CodeOrder::BigEndian),
-        SampleFormat::U16Le => (2, false, CodeOrder::LittleEndian),
-        SampleFormat::I16Be => (2, true, CodeOrder::BigEndian),
-        SampleFormat::I16Le => (2, true, CodeOrder::LittleEndian),
-    };
-    let scale = CodeScale {
-        volts_per_code: waveform.volts_per_code,
-        volts_origin: waveform.volts_origin,
-        code_reference: waveform.code_reference,
-        interval_s: waveform.interval_s,
-        time_origin_s: waveform.time_origin_s,
-        index_reference: waveform.index_reference,
-        clip_codes: Some(waveform.clip_codes),
-    };
-    decode_codes(&waveform.payload, Codes { bytes, signed, order }, &scale).map_err(|error| error.to_string())
 }

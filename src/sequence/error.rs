@@ -54,15 +54,15 @@ pub enum RunError {
         /// Highest voltage seen.
         highest_v: f64,
     },
-    /// The bulk voltage or the clamp level keeps moving.
+    /// The output voltage, the bulk voltage or the clamp level keeps moving.
     #[error(
-        "{what} still moved by {change_percent:.2} % between surveys after {waited_s:.1} s at {line_v} V line; \
+        "{what} still moved by {change_percent:.2} % from one look to the next after {waited_s:.1} s at {line_v} V line; \
          allow a longer settle time in the plan"
     )]
     NotSettled {
         /// Which level.
         what: &'static str,
-        /// Relative change between the last two surveys, in per cent.
+        /// Relative change between the last two looks, in per cent.
         change_percent: f64,
         /// Time waited.
         waited_s: f64,

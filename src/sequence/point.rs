@@ -74,7 +74,7 @@ impl Bench<'_> {
             self.source.on().await?;
         }
         self.keeper.event(&Event::LineSet { line_v, frequency_hz })?;
-        self.settle_output().await.map(|_| ())
+        self.output_up().await.map(|_| ())
     }
 
     /// Where the board file states no switching frequency, the cycles at the load start tell it.

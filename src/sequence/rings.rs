@@ -16,12 +16,14 @@ const WORTHWHILE_PERIODS: f64 = 30.0;
 const LONG_ENOUGH: f64 = 0.8;
 /// Share of the time before the trigger.
 const BEFORE_TRIGGER: f64 = 0.05;
+/// Of a relaxation ring that has not been fitted yet.
+const USUAL_QUALITY_FACTOR: f64 = 15.0;
 
 impl Bench<'_> {
     /// Captures the relaxation ring as often as the plan says.
     pub(super) async fn relaxation_rings(&mut self, survey: &Survey) -> Result<Vec<(usize, Findings)>, RunError> {
         let window_s = relaxation_window_s(survey).unwrap_or_else(|| self.survey_window_s.unwrap_or(1e-3));
-        let horizontal = Horizontal { window_s, start_s: -BEFORE_TRIGGER * window_s };
+        let horizontal = Horizontal { window_s, start_s: -BEFORE_TRIGGER * window_s, interval_s: None };
         let count = self.job.plan.relaxation_captures;
         self.rings(Purpose::RelaxationRing, horizontal, survey, count).await
     }
@@ -32,7 +34,7 @@ impl Bench<'_> {
             self.note(format!("survey {} shows no whole plateau: no leakage ring was captured", survey.number))?;
             return Ok(Vec::new());
         };
-        let horizontal = Horizontal { window_s: before_s + after_s, start_s: -before_s };
+        let horizontal = Horizontal { window_s: before_s + after_s, start_s: -before_s, interval_s: None };
         let count = self.job.plan.leakage_captures;
         self.rings(Purpose::LeakageRing, horizontal, survey, count).await
     }
@@ -62,12 +64,20 @@ impl Bench<'_> {
     }
 }
 
-/// Rising through the middle between reflected plateau and peak: only a turn-off crosses it.
+/// Rising through the middle between the first crest of the relaxation ring and the reflected plateau: every turn-off crosses
+/// it, however little it overshoots, and no ring reaches it.
 fn turn_off_trigger(survey: &Survey) -> Trigger {
-    let value = |m: Option<ringstep_analysis::quantity::Measured>| m.map(|m| m.value);
-    let bulk_v = value(survey.findings.bulk_voltage_v).unwrap_or(0.5 * survey.highest_v);
-    let plateau_v = bulk_v + value(survey.findings.reflected_voltage_v).unwrap_or(0.0);
-    let level_v = 0.5 * (plateau_v.min(survey.highest_v) + survey.highest_v);
+    let findings = &survey.findings;
+    let level_v = match (findings.bulk_voltage_v, findings.reflected_voltage_v) {
+        (Some(bulk), Some(reflected)) => {
+            let quality_factor =
+                findings.relaxation_ring.map_or(USUAL_QUALITY_FACTOR, |ring| ring.quality_factor.value);
+            let crest = (-std::f64::consts::PI / quality_factor).exp();
+            bulk.value + reflected.value * 0.5 * (1.0 + crest)
+        }
+        (Some(bulk), None) => 0.5 * (bulk.value + survey.highest_v),
+        _ => 0.75 * survey.highest_v,
+    };
     Trigger { level_v, slope: Slope::Rising, holdoff_s: 0.0 }
 }
 

@@ -15,6 +15,8 @@ use std::time::Instant;
 const CYCLES: usize = 6;
 /// Switching periods in the first window.
 const FIRST_WINDOW_PERIODS: f64 = 40.0;
+/// Samples that a switching period is worth in a survey: enough for its edges. More only cost their transfer at every load step.
+const SAMPLES_A_PERIOD: f64 = 1000.0;
 /// First window where no switching frequency is stated.
 const FIRST_WINDOW_S: f64 = 1e-3;
 /// Longest window: a longer burst period is not surveyed.
@@ -135,7 +137,11 @@ impl Bench<'_> {
         Setup {
             purpose: Purpose::Survey,
             vertical: self.vertical.unwrap_or(whole),
-            horizontal: Horizontal { window_s, start_s: -0.1 * window_s },
+            horizontal: Horizontal {
+                window_s,
+                start_s: -0.1 * window_s,
+                interval_s: self.facts.switching_period_s.map(|period_s| period_s / SAMPLES_A_PERIOD),
+            },
             trigger: Trigger { level_v: 0.5 * bulk_v, slope: Slope::Rising, holdoff_s: 0.0 },
         }
     }

@@ -126,7 +126,8 @@ fn read(trace: &Trace<'_>, found: &OnStates, off: &Off, whole: &[(usize, f64)]) 
             _ => CycleMode::Incomplete,
         },
     };
-    let reflected_v = seen.and_then(|seen| Some(seen.plateau.at(seen.knee_s?) - bulk_v)).filter(|_| off.on.is_some());
+    let reflected_v =
+        seen.zip(knee_s).map(|(seen, knee_s)| seen.plateau.at(knee_s) - bulk_v).filter(|_| off.on.is_some());
     Segment { cycle, bulk_v, reflected_v, relaxation, leakage }
 }
 

@@ -31,6 +31,12 @@ struct Fall {
 /// Falls looked at: a leakage ring adds some, and none follow once the relaxation ring has begun.
 const FALLS: usize = 64;
 
+/// Samples at the end of the plateau that are averaged at least, and the share of its length where there are more.
+const BLOCK: usize = 3;
+const BLOCK_SHARE: f64 = 0.006;
+/// Share of the plateau's height by which the voltage must have left it.
+const DROP: f64 = 0.06;
+
 /// Reads one off-state. `built_vs` are the volt-seconds of the on-state before it, where the record shows all of it.
 /// `None` where the range is too short for a plateau.
 pub(super) fn demagnetisation(
@@ -83,26 +89,30 @@ fn with_ring(trace: &Trace<'_>, off: Range<usize>, bulk_v: f64, fall: usize) -> 
     Some(Demagnetisation { plateau, knee_s: Some(knee_s), fall: Some(fall) })
 }
 
-/// No fall through the bulk voltage: either the secondary conducts to the end, or the knee has just been passed.
+/// No fall through the bulk voltage: either the secondary conducts to the end, or the knee has just been passed. Right before
+/// the turn-on the voltage stands clear of the plateau then, by the beginning of a cosine, which is a parabola.
 fn without_ring(trace: &Trace<'_>, off: Range<usize>, levels: &Levels, bulk_v: f64) -> Option<Demagnetisation> {
     let (start_s, end_s) = (trace.time_s(off.start), trace.time_s(off.end - 1));
     let length_s = end_s - start_s;
-    let plateau = trace.line(trace.between(start_s + 0.4 * length_s, start_s + 0.75 * length_s))?;
+    let plateau = trace.line(trace.between(start_s + 0.5 * length_s, start_s + 0.85 * length_s))?;
+    let block = ((BLOCK_SHARE * off.len() as f64) as usize).max(BLOCK);
+    let drop_v = |end: usize| {
+        let range = end.saturating_sub(block).max(off.start)..end;
+        let sum: f64 = range.clone().map(|index| plateau.at(trace.time_s(index)) - trace.volts[index]).sum();
+        sum / range.len().max(1) as f64
+    };
+    let last_v = drop_v(off.end);
     let height_v = plateau.at(end_s) - bulk_v;
-    let last = off.end.saturating_sub(3).max(off.start)..off.end;
-    let last_v = trace.volts[last.clone()].iter().sum::<f64>() / last.len() as f64;
-    let step_v = trace.samples.step_v().unwrap_or(0.0);
-    let drop_v = plateau.at(end_s) - last_v;
-    if drop_v < (0.15 * height_v).max(5.0 * levels.noise_v).max(2.0 * step_v) {
+    let blur_v = levels.noise_v / (block as f64).sqrt();
+    if last_v < (DROP * height_v).max(5.0 * blur_v) {
         let late = trace.between(start_s + 0.5 * length_s, end_s);
         let plateau = trace.line(late).unwrap_or(plateau);
         return Some(Demagnetisation { plateau, knee_s: None, fall: None });
     }
-    let near = off.clone().rev().find(|&index| {
-        let line_v = plateau.at(trace.time_s(index));
-        line_v - trace.volts[index] < 0.1 * (line_v - bulk_v)
-    });
-    Some(Demagnetisation { plateau, knee_s: near.map(|index| trace.time_s(index)), fall: None })
+    // A parabola has a quarter of its depth halfway.
+    let quarter = (off.start + 1..off.end).rev().find(|&index| drop_v(index) < 0.25 * last_v);
+    let knee_s = quarter.map(|quarter| 2.0 * trace.time_s(quarter - 1) - end_s);
+    Some(Demagnetisation { plateau, knee_s: knee_s.map(|knee_s| knee_s.max(start_s)), fall: None })
 }
 
 /// Median of the middle of a range: the plateau, whatever rings at its beginning.

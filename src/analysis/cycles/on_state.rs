@@ -54,6 +54,19 @@ pub(super) struct OnStates {
 const ENTER: f64 = 0.25;
 const LEAVE: f64 = 0.35;
 
+/// Shares of that way from which a fall is timed down to where the run begins: the edge may start from a ring's trough.
+const HIGH: [f64; 3] = [0.75, 0.6, 0.45];
+
+/// An edge steeper than a ring of this swing and quarter period by this factor is a switch that closes.
+const STEEP: f64 = 3.0;
+
+/// Length of a turn-on's edge, from its beginning to a quarter of its height, over the time of its middle half: a switch that
+/// closes against the recovering rectifier begins slowly.
+const EDGE: f64 = 4.0;
+
+/// Samples within the middle half of an edge from which on its beginning is told by time and not by sample.
+const RESOLVED: f64 = 3.0;
+
 /// Volt-seconds that a run adds over volt-seconds that the swing before it took: at most 1.5 for a ring that touches zero
 /// (the body diode carries no more than the ring brought), a multiple of that where the switch takes up energy.
 const ENERGISING: f64 = 3.0;
@@ -77,24 +90,21 @@ pub(super) fn find(trace: &Trace<'_>) -> Option<OnStates> {
 
 impl OnStates {
     fn take(&mut self, trace: &Trace<'_>, run: Run) {
-        let Levels { on_v, mean_v, noise_v } = self.levels;
+        let Levels { on_v, mean_v, .. } = self.levels;
         let floor = self.list.last().map_or(0, |on| on.end).max(self.swings.last().map_or(0, |swing| swing.end));
-        let crest = crest_before(trace, run.start, floor, mean_v, noise_v);
-        let taken_vs = above_vs(trace, crest, run.start, mean_v);
-        let added_vs = -trace.area_vs(run.start, run.end.min(trace.len() - 1), mean_v);
         let (cut_at_start, cut_at_end) = (run.start == 0, run.end == trace.len());
-        if cut_at_end && !cut_at_start && added_vs < ENERGISING * taken_vs {
-            self.end = crest + 1;
+        let fall = Fall::read(trace, run.start, floor, &self.levels);
+        let taken_vs = above_vs(trace, fall.crest, run.start, mean_v);
+        let added_vs = -trace.area_vs(run.start, run.end.min(trace.len() - 1), mean_v);
+        if !cut_at_start && !fall.is_steep(trace, &self.levels) && added_vs < ENERGISING * taken_vs {
+            if cut_at_end {
+                self.end = fall.crest + 1;
+            }
             self.swings.push(run);
             return;
         }
-        if added_vs < ENERGISING * taken_vs && !cut_at_start {
-            self.swings.push(run);
-            return;
-        }
-        let edge = if cut_at_start { 0 } else { edge_before(trace, crest, run.start) };
-        let turn_on_s =
-            if cut_at_start { trace.time_s(0) } else { trace.crossing_s(run.start, on_v + ENTER * (mean_v - on_v)) };
+        let edge = if cut_at_start { 0 } else { fall.edge(trace, run.start) };
+        let turn_on_s = if cut_at_start { trace.time_s(0) } else { fall.low_s };
         let turn_off_s = if cut_at_end {
             trace.time_s(trace.len() - 1)
         } else {
@@ -105,6 +115,55 @@ impl OnStates {
             Some(last) => (last.end, last.turn_off_s, last.cut_at_end) = (on.end, on.turn_off_s, on.cut_at_end),
             None => self.list.push(on),
         }
+    }
+}
+
+/// A fall to the lower level.
+struct Fall {
+    /// First sample it can have come from.
+    floor: usize,
+    /// Sample it came from.
+    crest: usize,
+    /// Last sample above the mean; the crest where that is none.
+    crossing: usize,
+    /// When the run begins.
+    low_s: f64,
+    /// Steepest way down to there.
+    slope_v_per_s: f64,
+    /// Time in which that slope falls by half of the mean.
+    half_s: f64,
+}
+
+impl Fall {
+    fn read(trace: &Trace<'_>, start: usize, floor: usize, levels: &Levels) -> Self {
+        let height_v = levels.mean_v - levels.on_v;
+        let crest = crest_before(trace, start, floor, levels);
+        let last_above = |v: f64| (crest..start).rev().find(|&index| trace.volts[index] >= v);
+        let crossing = last_above(levels.mean_v).unwrap_or(crest);
+        let low_s = trace.crossing_s(start, levels.on_v + ENTER * height_v);
+        let slope = |share: f64| {
+            let high_v = levels.on_v + share * height_v;
+            let high_s = trace.crossing_s(last_above(high_v)? + 1, high_v);
+            Some((share - ENTER) * height_v / (low_s - high_s))
+        };
+        let slope_v_per_s = HIGH.into_iter().filter_map(slope).fold(0.0, f64::max);
+        Self { floor, crest, crossing, low_s, slope_v_per_s, half_s: 0.5 * height_v / slope_v_per_s }
+    }
+
+    /// Last sample before the edge of a switch that closes.
+    fn edge(&self, trace: &Trace<'_>, start: usize) -> usize {
+        if self.half_s.is_finite() && self.half_s > RESOLVED * trace.samples.mean_interval_s() {
+            return trace.samples.index_at(self.low_s - EDGE * self.half_s).saturating_sub(1).max(self.floor);
+        }
+        edge_before(trace, self.crest, start)
+    }
+
+    /// Whether it is faster than a ring of its own swing could be, whose steepest slope is its swing times its angular frequency.
+    fn is_steep(&self, trace: &Trace<'_>, levels: &Levels) -> bool {
+        let swing_v = trace.volts[self.crest] - levels.mean_v;
+        let quarter_s = trace.time_s(self.crossing) - trace.time_s(self.crest);
+        let ring_v_per_s = swing_v.max(0.0) * std::f64::consts::FRAC_PI_2 / quarter_s;
+        quarter_s > 0.0 && self.slope_v_per_s > STEEP * ring_v_per_s
     }
 }
 
@@ -178,17 +237,26 @@ fn noise(trace: &Trace<'_>, runs: &[Run]) -> f64 {
     *median / (0.6745 * 6_f64.sqrt())
 }
 
-/// Walks back from a fall to the crest it came from: the last sample near the highest of the swing, not before `floor`.
-fn crest_before(trace: &Trace<'_>, fall: usize, floor: usize, mean_v: f64, noise_v: f64) -> usize {
-    let (mut crest, mut crest_v) = (fall, trace.volts[fall]);
+/// A ring that swings to zero takes at most this many times as long from its crest to the mean as from the mean to the lower
+/// level, even where it would swing as far below zero as it can.
+const QUARTER: f64 = 3.0;
+
+/// The crest a fall came from: going back from the fall, the highest sample before the voltage is clearly lower again, not
+/// before `floor` and no further back than a ring could have come.
+fn crest_before(trace: &Trace<'_>, fall: usize, floor: usize, levels: &Levels) -> usize {
+    let mut crest = fall;
+    let mut earliest = floor;
     for index in (floor..fall).rev() {
-        let v = trace.volts[index];
-        let swing_v = (crest_v - mean_v).max(0.0);
-        let clear_v = (3.0 * noise_v).max(0.03 * swing_v);
-        if v > crest_v + clear_v || index + 1 == fall {
-            (crest, crest_v) = (index, v.max(crest_v));
-        } else if v < crest_v - 2.0 * clear_v - 0.05 * swing_v || index + 3 + 4 * (fall - crest) < crest {
+        let (v, crest_v) = (trace.volts[index], trace.volts[crest]);
+        if v >= crest_v {
+            crest = index;
+        }
+        if index < earliest || v < crest_v - (6.0 * levels.noise_v).max(0.1 * (crest_v - levels.on_v)) {
             break;
+        }
+        if earliest == floor && v > levels.mean_v {
+            let fall_s = trace.time_s(fall) - trace.time_s(index);
+            earliest = trace.samples.index_at(trace.time_s(index) - QUARTER * fall_s).max(floor);
         }
     }
     crest
