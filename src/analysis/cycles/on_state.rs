@@ -2,6 +2,7 @@
 //! on-states and not a ring that swings down to the body diode.
 
 use super::trace::Trace;
+use std::ops::Range;
 
 /// Levels of the record.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -67,6 +68,9 @@ const EDGE: f64 = 4.0;
 /// Samples within the middle half of an edge from which on its beginning is told by time and not by sample.
 const RESOLVED: f64 = 3.0;
 
+/// Share of the crest before a run by which the voltage behind it must at least rise.
+const HIGHER: f64 = 1.03;
+
 /// Volt-seconds that a run adds over volt-seconds that the swing before it took: at most 1.5 for a ring that touches zero
 /// (the body diode carries no more than the ring brought), a multiple of that where the switch takes up energy.
 const ENERGISING: f64 = 3.0;
@@ -85,10 +89,17 @@ pub(super) fn find(trace: &Trace<'_>) -> Option<OnStates> {
     for run in runs {
         found.take(trace, run);
     }
-    (!found.list.is_empty()).then_some(found)
+    (found.median_length() >= RESOLVED).then_some(found)
 }
 
 impl OnStates {
+    /// Samples in the middle one of the on-states by length; 0 where there is none.
+    fn median_length(&self) -> f64 {
+        let mut lengths: Vec<usize> = self.list.iter().map(|on| on.end - on.start).collect();
+        lengths.sort_unstable();
+        lengths.get(lengths.len() / 2).map_or(0.0, |&length| length as f64)
+    }
+
     fn take(&mut self, trace: &Trace<'_>, run: Run) {
         let Levels { on_v, mean_v, .. } = self.levels;
         let floor = self.list.last().map_or(0, |on| on.end).max(self.swings.last().map_or(0, |swing| swing.end));
@@ -96,14 +107,17 @@ impl OnStates {
         let fall = Fall::read(trace, run.start, floor, &self.levels);
         let taken_vs = above_vs(trace, fall.crest, run.start, mean_v);
         let added_vs = -trace.area_vs(run.start, run.end.min(trace.len() - 1), mean_v);
-        if !cut_at_start && !fall.is_steep(trace, &self.levels) && added_vs < ENERGISING * taken_vs {
+        let energised = added_vs >= ENERGISING * taken_vs
+            || fall.is_steep(trace, &self.levels)
+            || fall.rises_higher(trace, run.end, &self.levels);
+        if !cut_at_start && !energised {
             if cut_at_end {
                 self.end = fall.crest + 1;
             }
             self.swings.push(run);
             return;
         }
-        let edge = if cut_at_start { 0 } else { fall.edge(trace, run.start) };
+        let edge = if cut_at_start { 0 } else { fall.edge(trace, run.start, &self.levels) };
         let turn_on_s = if cut_at_start { trace.time_s(0) } else { fall.low_s };
         let turn_off_s = if cut_at_end {
             trace.time_s(trace.len() - 1)
@@ -151,11 +165,11 @@ impl Fall {
     }
 
     /// Last sample before the edge of a switch that closes.
-    fn edge(&self, trace: &Trace<'_>, start: usize) -> usize {
+    fn edge(&self, trace: &Trace<'_>, start: usize, levels: &Levels) -> usize {
         if self.half_s.is_finite() && self.half_s > RESOLVED * trace.samples.mean_interval_s() {
             return trace.samples.index_at(self.low_s - EDGE * self.half_s).saturating_sub(1).max(self.floor);
         }
-        edge_before(trace, self.crest, start)
+        edge_before(trace, self.floor, self.crest, start, levels.noise_v)
     }
 
     /// Whether it is faster than a ring of its own swing could be, whose steepest slope is its swing times its angular frequency.
@@ -165,6 +179,36 @@ impl Fall {
         let ring_v_per_s = swing_v.max(0.0) * std::f64::consts::FRAC_PI_2 / quarter_s;
         quarter_s > 0.0 && self.slope_v_per_s > STEEP * ring_v_per_s
     }
+
+    /// Whether the voltage rises clearly higher behind the run than the whole crest before it: a ring left to itself only decays.
+    fn rises_higher(&self, trace: &Trace<'_>, end: usize, levels: &Levels) -> bool {
+        let rises_from = (self.floor..self.crest).rev().find(|&index| trace.volts[index] < levels.mean_v);
+        if rises_from.is_none() && self.floor == 0 {
+            return false;
+        }
+        let falls_at = (end + 1..trace.len()).find(|&index| trace.volts[index] < levels.mean_v).unwrap_or(trace.len());
+        let (before_v, after_v) = (summit_v(trace, self.crest..self.crossing + 1), summit_v(trace, end..falls_at));
+        after_v - levels.mean_v > HIGHER * (before_v - levels.mean_v) + 3.0 * levels.noise_v
+    }
+}
+
+/// Highest point of a range, between samples by the parabola through a sample and its neighbours: a fast ring has few.
+fn summit_v(trace: &Trace<'_>, range: Range<usize>) -> f64 {
+    let summit = |index: usize| {
+        let here_v = trace.volts[index];
+        let neighbours = index
+            .checked_sub(1)
+            .zip(trace.volts.get(index + 1))
+            .map(|(before, &after_v)| (trace.volts[before], after_v));
+        let Some((before_v, after_v)) =
+            neighbours.filter(|&(before_v, after_v)| here_v >= before_v && here_v >= after_v)
+        else {
+            return here_v;
+        };
+        let bend_v = 2.0 * here_v - before_v - after_v;
+        if bend_v > 0.0 { here_v + 0.125 * (after_v - before_v).powi(2) / bend_v } else { here_v }
+    };
+    range.map(summit).fold(f64::NEG_INFINITY, f64::max)
 }
 
 /// Whether what lies between two runs is a spike inside one on-state: short, and without volt-seconds to speak of.
@@ -271,15 +315,19 @@ fn above_vs(trace: &Trace<'_>, from: usize, to: usize, mean_v: f64) -> f64 {
     (from..to).map(piece).sum()
 }
 
+/// Steps before an edge whose mean tells how fast the voltage falls by itself.
+const APPROACH: usize = 3;
+
 /// Last sample before the steep part of a fall.
-fn edge_before(trace: &Trace<'_>, crest: usize, fall: usize) -> usize {
+fn edge_before(trace: &Trace<'_>, floor: usize, crest: usize, fall: usize, noise_v: f64) -> usize {
     let drop = |index: usize| trace.volts[index] - trace.volts[index + 1];
     let last = (fall + 1).min(trace.len() - 1);
     let Some(steepest) = (crest..last).max_by(|&a, &b| drop(a).total_cmp(&drop(b))) else { return crest };
     let limit = 0.15 * drop(steepest);
-    (crest..=steepest)
-        .rev()
-        .find(|&index| drop(index) < limit)
-        .map_or(crest, |index| index + 1)
-        .min(fall.saturating_sub(1))
+    let edge = (crest..=steepest).rev().find(|&index| drop(index) < limit).map_or(crest, |index| index + 1);
+    let edge = edge.min(fall.saturating_sub(1));
+    // A sample that leaves its neighbours abruptly already stands in the edge.
+    let Some(before) = edge.checked_sub(1 + APPROACH).filter(|&before| before >= floor) else { return edge };
+    let approach_v = (trace.volts[before] - trace.volts[edge - 1]).abs() / APPROACH as f64;
+    if drop(edge - 1) > 2.0 * approach_v + 3.0 * noise_v { edge - 1 } else { edge }
 }

@@ -37,14 +37,27 @@ fn random_shape(random: &mut ChaCha12Rng) -> Shape {
     }
 }
 
-/// Holds every whole cycle that was found against what was put in.
-fn compare(found: &Segmentation, truths: &[True], samples: &Samples, label: &str) {
+/// How well a knee can be told: well where the plateau can be seen apart from the leakage ring, within half a ring period where
+/// it can't.
+fn knee_tolerance_s(shape: &Shape, truth: &True, interval_s: f64) -> f64 {
+    let half_plateau_s = 0.5 * (truth.knee_s - truth.turn_off_s);
+    let left_v = shape.leak_v * (-shape.leak_decay_per_s * half_plateau_s).exp();
+    if left_v < 0.15 * shape.reflected_v && half_plateau_s > 5.0 * interval_s {
+        60e-9 + interval_s
+    } else {
+        0.5 / shape.ring_hz + interval_s
+    }
+}
+
+/// Holds every whole cycle that was found against what was put in, and counts those whose knee could be held closely.
+fn compare(shape: &Shape, found: &Segmentation, truths: &[True], samples: &Samples, label: &str) -> usize {
     let interval_s = samples.mean_interval_s();
     // A turn-on at the very ends of the record may or may not be seen.
     let inside: Vec<&True> = truths
         .iter()
         .filter(|truth| truth.turn_on_s > 2.0 * interval_s && truth.end_s < samples.end_s() - 2.0 * interval_s)
         .collect();
+    let mut close = 0;
     for truth in &inside {
         let segment =
             found.segments.iter().find(|s| (s.cycle.start_s - truth.turn_on_s).abs() < 60e-9 + 1.5 * interval_s);
@@ -52,21 +65,34 @@ fn compare(found: &Segmentation, truths: &[True], samples: &Samples, label: &str
         let boundary = (truth.knee_s - truth.end_s).abs() < 2.0 * interval_s;
         assert!(segment.cycle.mode == truth.mode || boundary, "{label}: {truth:?} read as {segment:?}");
         if truth.mode != CycleMode::Continuous && !boundary {
-            if let Some(knee_s) = segment.cycle.end_of_demagnetisation_s {
-                assert!(
-                    (knee_s - truth.knee_s).abs() < 60e-9 + interval_s,
-                    "{label}: {truth:?} has its knee at {knee_s}"
-                );
-            }
+            let knee_s = segment.cycle.end_of_demagnetisation_s.unwrap();
+            let tolerance_s = knee_tolerance_s(shape, truth, interval_s);
+            assert!((knee_s - truth.knee_s).abs() < tolerance_s, "{label}: {truth:?} has its knee at {knee_s}");
+            close += usize::from(tolerance_s < 60e-9 + 1.1 * interval_s);
         }
     }
-    let whole = found.segments.iter().filter(|segment| segment.cycle.mode != CycleMode::Incomplete).count();
-    assert!(whole.abs_diff(inside.len()) <= 2, "{label}: {whole} cycles for {}", inside.len());
+    // And none that was not put in.
+    for segment in found.segments.iter().filter(|segment| segment.cycle.mode != CycleMode::Incomplete) {
+        let near = |truth: &True| (segment.cycle.start_s - truth.turn_on_s).abs() < 60e-9 + 1.5 * interval_s;
+        assert!(truths.iter().any(near), "{label}: {segment:?} was not put in");
+    }
+    close
+}
+
+fn tally(name: &str, seeds: std::ops::Range<u64>, f: impl Fn(u64) + std::panic::RefUnwindSafe) {
+    let mut bad = 0;
+    for seed in seeds.clone() {
+        if std::panic::catch_unwind(|| f(seed)).is_err() {
+            bad += 1;
+        }
+    }
+    println!("TALLY {name} {bad} of {}", seeds.end);
+    assert_eq!(bad, 0);
 }
 
 #[test]
 fn every_cycle_is_classified_over_many_seeds() {
-    for seed in 0..120 {
+    tally("every_cycle_is_classified_over_many_seeds", seeds(120), |seed| {
         let mut random = ChaCha12Rng::seed_from_u64(seed);
         let mut shape = random_shape(&mut random);
         let gaps: &[usize] = [&[1][..], &[1, 1, 1, 9], &[1, 3, 1, 2], &[1, 1, 40]][random.random_range(0..4)];
@@ -83,14 +109,14 @@ fn every_cycle_is_classified_over_many_seeds() {
         let facts =
             BoardFacts { switching_period_s: Some(shape.period_s), skips_cycles: Some(true), ..BoardFacts::default() };
         let Some(found) = segment(&samples, &facts) else { panic!("{label}: nothing found") };
-        compare(&found, &truths, &samples, &label);
+        compare(&shape, &found, &truths, &samples, &label);
         assert_eq!(found.collapse, None, "{label}");
-    }
+    });
 }
 
 #[test]
 fn continuous_conduction_is_told_from_discontinuous() {
-    for seed in 0..60 {
+    tally("continuous_conduction_is_told_from_discontinuous", seeds(60), |seed| {
         let mut random = ChaCha12Rng::seed_from_u64(1000 + seed);
         let mut shape = random_shape(&mut random);
         // The plateau ends exactly where volt-seconds balance: lengthen the on-time beyond the period's share.
@@ -100,14 +126,14 @@ fn continuous_conduction_is_told_from_discontinuous() {
         let (samples, truths) = waveform(&shape, &[1.0], &[1], interval_s, count, random.random_range(0.0..8e-6), seed);
         let label = format!("seed {seed} interval {interval_s} {shape:?}");
         let found = segment(&samples, &BoardFacts::default()).unwrap();
-        compare(&found, &truths, &samples, &label);
+        compare(&shape, &found, &truths, &samples, &label);
         assert!(found.segments.iter().all(|segment| segment.relaxation.is_none()), "{label}");
-    }
+    });
 }
 
 #[test]
 fn noise_and_bare_rings_hold_no_switching_cycles() {
-    for seed in 0..200 {
+    tally("noise_and_bare_rings_hold_no_switching_cycles", seeds(200), |seed| {
         let mut random = ChaCha12Rng::seed_from_u64(seed);
         let mut volts: Vec<f64> = (0..5000).map(|_| random.random_range(-1.0..1.0)).collect();
         if seed % 2 == 1 {
@@ -120,5 +146,10 @@ fn noise_and_bare_rings_hold_no_switching_cycles() {
         let samples = Samples::new(TimeAxis::Even { start_s: 0.0, interval_s: 1e-8 }, volts).unwrap();
         let found = segment(&samples, &BoardFacts::default());
         assert!(found.is_none(), "seed {seed}: {found:?}");
-    }
+    });
+}
+
+fn seeds(n: u64) -> std::ops::Range<u64> {
+    let k: u64 = std::env::var("SEEDS").ok().and_then(|s| s.parse().ok()).unwrap_or(1);
+    0..n * k
 }

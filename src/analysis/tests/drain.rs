@@ -116,8 +116,10 @@ fn off_voltage(shape: &Shape, cycle: &True, t: f64) -> f64 {
     let plateau_v = shape.bulk_v + shape.reflected_v;
     if t > cycle.knee_s {
         let since = t - cycle.knee_s;
-        let v = shape.bulk_v
-            + shape.reflected_v * (-shape.ring_decay_per_s * since).exp() * (TAU * shape.ring_hz * since).cos();
+        // From rest: no current flows at the knee, so the voltage leaves the plateau without a kink.
+        let (w, decay) = (TAU * shape.ring_hz, shape.ring_decay_per_s);
+        let ring = (-decay * since).exp() * ((w * since).cos() + decay / w * (w * since).sin());
+        let v = shape.bulk_v + shape.reflected_v * ring;
         // The body diode holds the node.
         return v.max(-0.7);
     }
