@@ -58,7 +58,7 @@ fn drain(samples: &Samples, facts: &BoardFacts) -> Findings {
         findings.peak_drain_voltage_v = None;
         findings.doubt(
             DoubtName::NoSwitchingCycles,
-            "No switching cycles stand in the record; check probe and trigger, or read it as a bare ring-down.",
+            "No switching cycles can be told in the record; check probe, trigger and sample rate, or read it as a bare ring-down.",
         );
         return findings;
     };
@@ -181,6 +181,12 @@ fn spread(values: impl Iterator<Item = f64>) -> Option<Measured> {
 fn absences(segmentation: &Segmentation, findings: &mut Findings) {
     if let Some(collapse) = &segmentation.collapse {
         findings.doubt(DoubtName::ProtectionOrRestart, collapse);
+    }
+    if !segmentation.turn_ons_resolved {
+        findings.doubt(
+            DoubtName::CoarseSampling,
+            "The shortest on-states last under four samples, so that cycles may be missing: shorten the window.",
+        );
     }
     let whole = || segmentation.segments.iter().filter(|segment| segment.cycle.mode != CycleMode::Incomplete);
     if findings.relaxation_ring.is_none() {

@@ -120,7 +120,9 @@ fn crest_s(trace: &Trace<'_>, off: Range<usize>, fall: usize, bulk_v: f64, heigh
 fn without_ring(trace: &Trace<'_>, off: Range<usize>, levels: &Levels, bulk_v: f64) -> Option<Demagnetisation> {
     let (start_s, end_s) = (trace.time_s(off.start), trace.time_s(off.end - 1));
     let length_s = end_s - start_s;
-    let plateau = trace.line(trace.between(start_s + 0.5 * length_s, start_s + 0.85 * length_s))?;
+    let before = trace.between(start_s + 0.5 * length_s, start_s + 0.85 * length_s);
+    let points = before.len() as f64;
+    let plateau = trace.line(before)?;
     let block = ((BLOCK_SHARE * off.len() as f64) as usize).max(BLOCK);
     let drop_v = |end: usize| {
         let range = end.saturating_sub(block).max(off.start)..end;
@@ -129,8 +131,10 @@ fn without_ring(trace: &Trace<'_>, off: Range<usize>, levels: &Levels, bulk_v: f
     };
     let last_v = drop_v(off.end);
     let height_v = plateau.at(end_s) - bulk_v;
-    let blur_v = levels.noise_v / (block as f64).sqrt();
-    if last_v < (DROP * height_v).max(5.0 * blur_v) {
+    // Noise of the block's mean, and of the line there, which lies 0.325 lengths beyond the middle of its 0.35.
+    let blur_v = levels.noise_v * (1.0 / block as f64 + (1.0 + 12.0 * (0.325_f64 / 0.35).powi(2)) / points).sqrt();
+    // The last sample may already stand in the edge: what comes before it must have begun to fall as well.
+    if last_v < (DROP * height_v).max(5.0 * blur_v) || drop_v(off.end - 1) < 2.0 * blur_v {
         let late = trace.between(start_s + 0.5 * length_s, end_s);
         let plateau = trace.line(late).unwrap_or(plateau);
         return Some(Demagnetisation { plateau, knee_s: None, fall: None });

@@ -71,6 +71,25 @@ const RESOLVED: f64 = 3.0;
 /// Share of the crest before a run by which the voltage behind it must at least rise.
 const HIGHER: f64 = 1.03;
 
+/// Four times the steepness of a sine's half-cycle: half the square of pi.
+const ABRUPT: f64 = 20.0;
+
+/// Share of the way from the on-state to the mean that the voltage must stay above the mean for that to be told from a drift.
+const HIGH_ENOUGH: f64 = 0.2;
+
+/// Share of the way from the on-state to the mean above which a ring's valley can be told from the on-state.
+const VALLEY: f64 = 0.05;
+
+/// Samples below which most on-states are not told from noise.
+const BLIP: usize = 3;
+
+/// Share of the way from the on-state to the mean within which a level is one, and share of an on-state's samples that stand there.
+const ONE_LEVEL: f64 = 0.12;
+const FLAT: f64 = 0.7;
+
+/// Samples in the shortest on-state from which on none is missed.
+const SHORTEST: usize = 4;
+
 /// Volt-seconds that a run adds over volt-seconds that the swing before it took: at most 1.5 for a ring that touches zero
 /// (the body diode carries no more than the ring brought), a multiple of that where the switch takes up energy.
 const ENERGISING: f64 = 3.0;
@@ -89,15 +108,43 @@ pub(super) fn find(trace: &Trace<'_>) -> Option<OnStates> {
     for run in runs {
         found.take(trace, run);
     }
-    (found.median_length() >= RESOLVED).then_some(found)
+    (!found.list.is_empty() && found.is_one_level(trace)).then_some(found)
 }
 
 impl OnStates {
-    /// Samples in the middle one of the on-states by length; 0 where there is none.
-    fn median_length(&self) -> f64 {
-        let mut lengths: Vec<usize> = self.list.iter().map(|on| on.end - on.start).collect();
+    /// Samples in each on-state that is seen whole, in order of length.
+    fn lengths(&self) -> Vec<usize> {
+        let whole = self.list.iter().filter(|on| !on.cut_at_start && !on.cut_at_end);
+        let mut lengths: Vec<usize> = whole.map(|on| on.end - on.start).collect();
         lengths.sort_unstable();
-        lengths.get(lengths.len() / 2).map_or(0.0, |&length| length as f64)
+        lengths
+    }
+
+    /// Whether most on-states last some samples and stay at one level, as no noise does.
+    fn is_one_level(&self, trace: &Trace<'_>) -> bool {
+        let lengths = self.lengths();
+        if lengths.get(lengths.len() / 2).is_some_and(|&middle| middle < BLIP) {
+            return false;
+        }
+        let flat = self.list.iter().filter(|on| self.flat_share(trace, on.start..on.end) > FLAT).count();
+        4 * flat > 3 * self.list.len()
+    }
+
+    fn is_flat(&self, trace: &Trace<'_>, run: Run) -> bool {
+        run.end - run.start >= BLIP && self.flat_share(trace, run.start..run.end) > 0.9
+    }
+
+    /// Share of samples that stand at the on-state's level.
+    fn flat_share(&self, trace: &Trace<'_>, range: Range<usize>) -> f64 {
+        let Levels { on_v, mean_v, noise_v } = self.levels;
+        let near_v = (ONE_LEVEL * (mean_v - on_v)).max(1.5 * noise_v);
+        let count = range.len() as f64;
+        trace.volts[range].iter().filter(|&&v| (v - on_v).abs() < near_v).count() as f64 / count
+    }
+
+    /// Whether no on-state is so short in samples that another may have been missed.
+    pub(super) fn are_resolved(&self) -> bool {
+        self.lengths().first().is_none_or(|&shortest| shortest >= SHORTEST)
     }
 
     fn take(&mut self, trace: &Trace<'_>, run: Run) {
@@ -107,24 +154,34 @@ impl OnStates {
         let fall = Fall::read(trace, run.start, floor, &self.levels);
         let taken_vs = above_vs(trace, fall.crest, run.start, mean_v);
         let added_vs = -trace.area_vs(run.start, run.end.min(trace.len() - 1), mean_v);
-        let energised = added_vs >= ENERGISING * taken_vs
+        // A sample more or less of a coarse crest, and of a crest cut by the record's beginning it is not known what it took.
+        let slack_vs = (trace.volts[fall.crest] - mean_v).max(0.0) * trace.samples.mean_interval_s();
+        let energised = (fall.is_whole(trace, run, &self.levels) && added_vs >= ENERGISING * (taken_vs + slack_vs))
             || fall.is_steep(trace, &self.levels)
-            || fall.rises_higher(trace, run.end, &self.levels);
-        if !cut_at_start && !energised {
+            || fall.rises_higher(trace, run, &self.levels)
+            || opens(trace, run.end, &self.levels);
+        // A ring may begin in its trough.
+        let energised =
+            if cut_at_start { opens(trace, run.end, &self.levels) || self.is_flat(trace, run) } else { energised };
+        if !energised {
             if cut_at_end {
                 self.end = fall.crest + 1;
             }
             self.swings.push(run);
             return;
         }
-        let edge = if cut_at_start { 0 } else { fall.edge(trace, run.start, &self.levels) };
-        let turn_on_s = if cut_at_start { trace.time_s(0) } else { fall.low_s };
+        let valley = fall.valley_end(trace, run, &self.levels).filter(|_| !cut_at_start);
+        let (edge, start, turn_on_s) = match valley {
+            _ if cut_at_start => (0, run.start, trace.time_s(0)),
+            Some(low) => (low - 1, low, trace.time_s(low - 1)),
+            None => (fall.edge(trace, run.start, &self.levels), run.start, fall.low_s),
+        };
         let turn_off_s = if cut_at_end {
             trace.time_s(trace.len() - 1)
         } else {
             trace.crossing_s(run.end, on_v + LEAVE * (mean_v - on_v))
         };
-        let on = OnState { edge, start: run.start, end: run.end, turn_on_s, turn_off_s, cut_at_start, cut_at_end };
+        let on = OnState { edge, start, end: run.end, turn_on_s, turn_off_s, cut_at_start, cut_at_end };
         match self.list.last_mut().filter(|last| is_spike(trace, last, &on, mean_v)) {
             Some(last) => (last.end, last.turn_off_s, last.cut_at_end) = (on.end, on.turn_off_s, on.cut_at_end),
             None => self.list.push(on),
@@ -164,6 +221,19 @@ impl Fall {
         Self { floor, crest, crossing, low_s, slope_v_per_s, half_s: 0.5 * height_v / slope_v_per_s }
     }
 
+    /// First sample at the on-state's level where a ring lay in its valley before, at which the switch has closed.
+    fn valley_end(&self, trace: &Trace<'_>, run: Run, levels: &Levels) -> Option<usize> {
+        let step_v = trace.samples.step_v().unwrap_or(0.0);
+        let clear_v = (VALLEY * (levels.mean_v - levels.on_v)).max(4.0 * levels.noise_v).max(1.6 * step_v);
+        let low = (run.start..run.end).find(|&index| trace.volts[index] < levels.on_v + clear_v)?;
+        if low < run.start + 3 || trace.time_s(low) - self.low_s < 0.5 * self.half_s {
+            return None;
+        }
+        // The tail of an edge sags below the straight line from its beginning to its end; a valley lies above.
+        let lies_v = trace.mean_v(run.start, low - 1) - levels.on_v;
+        (lies_v > 0.65 * ENTER * (levels.mean_v - levels.on_v)).then_some(low)
+    }
+
     /// Last sample before the edge of a switch that closes.
     fn edge(&self, trace: &Trace<'_>, start: usize, levels: &Levels) -> usize {
         if self.half_s.is_finite() && self.half_s > RESOLVED * trace.samples.mean_interval_s() {
@@ -180,16 +250,40 @@ impl Fall {
         quarter_s > 0.0 && self.slope_v_per_s > STEEP * ring_v_per_s
     }
 
+    /// Whether the record shows the crest from its top on: a ring comes down from there in half the time it stays below.
+    fn is_whole(&self, trace: &Trace<'_>, run: Run, levels: &Levels) -> bool {
+        let seen_s = trace.time_s(self.crossing) - trace.time_s(0);
+        let length_s = trace.time_s(run.end.min(trace.len() - 1)) - trace.time_s(run.start);
+        self.floor > 0
+            || seen_s > 0.8 * length_s
+            || trace.volts[..self.crest].iter().any(|&v| v < levels.mean_v - 3.0 * levels.noise_v)
+    }
+
     /// Whether the voltage rises clearly higher behind the run than the whole crest before it: a ring left to itself only decays.
-    fn rises_higher(&self, trace: &Trace<'_>, end: usize, levels: &Levels) -> bool {
-        let rises_from = (self.floor..self.crest).rev().find(|&index| trace.volts[index] < levels.mean_v);
-        if rises_from.is_none() && self.floor == 0 {
+    fn rises_higher(&self, trace: &Trace<'_>, run: Run, levels: &Levels) -> bool {
+        let end = run.end;
+        if !self.is_whole(trace, run, levels) {
             return false;
         }
         let falls_at = (end + 1..trace.len()).find(|&index| trace.volts[index] < levels.mean_v).unwrap_or(trace.len());
         let (before_v, after_v) = (summit_v(trace, self.crest..self.crossing + 1), summit_v(trace, end..falls_at));
         after_v - levels.mean_v > HIGHER * (before_v - levels.mean_v) + 3.0 * levels.noise_v
     }
+}
+
+/// Whether the rise behind a run is a switch that opens: steeper, against the mean height and the length of what it rises to, than
+/// the half-cycle of a sine, where that product is half the square of pi.
+fn opens(trace: &Trace<'_>, end: usize, levels: &Levels) -> bool {
+    let height_v = levels.mean_v - levels.on_v;
+    let (low_v, high_v) = (levels.on_v + LEAVE * height_v, levels.mean_v);
+    let Some(above) = (end..trace.len()).find(|&index| trace.volts[index] >= high_v) else { return false };
+    let below = (end + 1..trace.len()).skip(above - end).find(|&index| trace.volts[index] < high_v);
+    let below = below.unwrap_or(trace.len() - 1);
+    let (low_s, high_s) = (trace.crossing_s(end, low_v), trace.crossing_s(above, high_v));
+    let length_s = trace.time_s(below) - high_s;
+    let slope_v_per_s = (high_v - low_v) / (high_s - low_s);
+    let mean_height_v = trace.mean_v(above, below) - high_v;
+    length_s > 0.0 && mean_height_v > HIGH_ENOUGH * height_v && slope_v_per_s * length_s > ABRUPT * mean_height_v
 }
 
 /// Highest point of a range, between samples by the parabola through a sample and its neighbours: a fast ring has few.
@@ -299,8 +393,9 @@ fn crest_before(trace: &Trace<'_>, fall: usize, floor: usize, levels: &Levels) -
             break;
         }
         if earliest == floor && v > levels.mean_v {
-            let fall_s = trace.time_s(fall) - trace.time_s(index);
-            earliest = trace.samples.index_at(trace.time_s(index) - QUARTER * fall_s).max(floor);
+            let mean_s = trace.crossing_s(index + 1, levels.mean_v);
+            let low_s = trace.crossing_s(fall, levels.on_v + ENTER * (levels.mean_v - levels.on_v));
+            earliest = trace.samples.index_at(mean_s - QUARTER * (low_s - mean_s)).max(floor);
         }
     }
     crest

@@ -1,11 +1,13 @@
 //! Segmentation of drain waveforms whose pieces are known.
 
-use crate::drain::{Clamp, Shape, True, waveform};
+use crate::drain::{Clamp, EDGE_S, Shape, True, valley_v, waveform};
+use crate::generate::Maker;
 use rand::{RngExt, SeedableRng};
 use rand_chacha::ChaCha12Rng;
-use ringstep_analysis::cycles::{Segmentation, segment};
+use ringstep_analysis::cycles::{Segment, Segmentation, segment};
 use ringstep_analysis::findings::{BoardFacts, CycleMode};
 use ringstep_analysis::waveform::{Samples, TimeAxis};
+use std::f64::consts::TAU;
 
 fn random_shape(random: &mut ChaCha12Rng) -> Shape {
     let bulk_v = random.random_range(100.0..375.0);
@@ -37,119 +39,174 @@ fn random_shape(random: &mut ChaCha12Rng) -> Shape {
     }
 }
 
-/// How well a knee can be told: well where the plateau can be seen apart from the leakage ring, within half a ring period where
-/// it can't.
+/// How well a knee can be told: well where the plateau can be seen apart from the leakage ring and the ring falls through the bulk
+/// voltage, somewhat less where its fall is cut short, and somewhere on the plateau where that can't be seen.
 fn knee_tolerance_s(shape: &Shape, truth: &True, interval_s: f64) -> f64 {
     let half_plateau_s = 0.5 * (truth.knee_s - truth.turn_off_s);
     let left_v = shape.leak_v * (-shape.leak_decay_per_s * half_plateau_s).exp();
+    let is_cut = truth.end_s - truth.knee_s < 0.3 / shape.ring_hz;
+    let close_s = 2.0 * EDGE_S + interval_s + if is_cut { 0.05 / shape.ring_hz } else { 0.0 };
     if left_v < 0.15 * shape.reflected_v && half_plateau_s > 5.0 * interval_s {
-        60e-9 + interval_s
+        close_s
     } else {
-        0.5 / shape.ring_hz + interval_s
+        close_s + 2.0 * half_plateau_s + 0.5 / shape.ring_hz
     }
 }
 
-/// Holds every whole cycle that was found against what was put in, and counts those whose knee could be held closely.
-fn compare(shape: &Shape, found: &Segmentation, truths: &[True], samples: &Samples, label: &str) -> usize {
+/// Every whole cycle that was put in is found, and classified as it was put in, and none is found that was not.
+fn compare(shape: &Shape, found: &Segmentation, truths: &[True], samples: &Samples) -> Result<(), String> {
     let interval_s = samples.mean_interval_s();
-    // A turn-on at the very ends of the record may or may not be seen.
-    let inside: Vec<&True> = truths
-        .iter()
-        .filter(|truth| truth.turn_on_s > 2.0 * interval_s && truth.end_s < samples.end_s() - 2.0 * interval_s)
-        .collect();
-    let mut close = 0;
-    for truth in &inside {
-        let segment =
-            found.segments.iter().find(|s| (s.cycle.start_s - truth.turn_on_s).abs() < 60e-9 + 1.5 * interval_s);
-        let Some(segment) = segment else { panic!("{label}: no cycle at {}: {:#?}", truth.turn_on_s, found.segments) };
+    let margin_s = 2.0 * EDGE_S + 2.0 * interval_s;
+    let is_at = |start_s: f64, index: usize| {
+        let truth = &truths[index];
+        // Where the ring has brought the node down by itself, no edge shows when the switch closed.
+        let valley = index.checked_sub(1).is_some_and(|before| valley_v(shape, &truths[before]) < 0.2 * shape.bulk_v);
+        let early_s = if valley { 0.5 / shape.ring_hz } else { 0.0 };
+        let tolerance_s = 2.0 * EDGE_S + 1.5 * interval_s;
+        (-early_s - tolerance_s..tolerance_s).contains(&(start_s - truth.turn_on_s))
+    };
+    for (index, truth) in truths.iter().enumerate() {
+        // The edge that begins a cycle and the on-state behind it may not be told where the record's ends cut them.
+        let end_s = truths.get(index + 1).map_or(f64::INFINITY, |next| next.turn_off_s);
+        if truth.turn_on_s < margin_s || end_s > samples.end_s() - margin_s {
+            continue;
+        }
+        let segment = found.segments.iter().find(|segment| is_at(segment.cycle.start_s, index));
+        let segment = segment.ok_or_else(|| format!("no cycle at {}", truth.turn_on_s))?;
         let boundary = (truth.knee_s - truth.end_s).abs() < 2.0 * interval_s;
-        assert!(segment.cycle.mode == truth.mode || boundary, "{label}: {truth:?} read as {segment:?}");
+        if segment.cycle.mode != truth.mode && !boundary {
+            return Err(format!("{truth:?} is read as {segment:?}"));
+        }
         if truth.mode != CycleMode::Continuous && !boundary {
-            let knee_s = segment.cycle.end_of_demagnetisation_s.unwrap();
-            let tolerance_s = knee_tolerance_s(shape, truth, interval_s);
-            assert!((knee_s - truth.knee_s).abs() < tolerance_s, "{label}: {truth:?} has its knee at {knee_s}");
-            close += usize::from(tolerance_s < 60e-9 + 1.1 * interval_s);
+            let off_s = segment.cycle.end_of_demagnetisation_s.unwrap() - truth.knee_s;
+            if off_s.abs() > knee_tolerance_s(shape, truth, interval_s) {
+                return Err(format!("{truth:?} has its knee off by {off_s}"));
+            }
         }
     }
-    // And none that was not put in.
-    for segment in found.segments.iter().filter(|segment| segment.cycle.mode != CycleMode::Incomplete) {
-        let near = |truth: &True| (segment.cycle.start_s - truth.turn_on_s).abs() < 60e-9 + 1.5 * interval_s;
-        assert!(truths.iter().any(near), "{label}: {segment:?} was not put in");
-    }
-    close
+    let whole = found.segments.iter().filter(|segment| segment.cycle.mode != CycleMode::Incomplete);
+    let invented = |segment: &&Segment| !(0..truths.len()).any(|index| is_at(segment.cycle.start_s, index));
+    whole.clone().find(invented).map_or(Ok(()), |segment| Err(format!("{segment:?} was not put in")))
 }
 
-fn tally(name: &str, seeds: std::ops::Range<u64>, f: impl Fn(u64) + std::panic::RefUnwindSafe) {
-    let mut bad = 0;
-    for seed in seeds.clone() {
-        if std::panic::catch_unwind(|| f(seed)).is_err() {
-            bad += 1;
-        }
+fn shape_with_gaps(random: &mut ChaCha12Rng) -> (Shape, &'static [usize], &'static [f64]) {
+    let mut shape = random_shape(random);
+    let gaps: &[usize] = [&[1][..], &[1, 1, 1, 9], &[1, 3, 1, 2], &[1, 1, 40]][random.random_range(0..4)];
+    let on_scale: &[f64] = if gaps.len() == 1 { &[1.0] } else { &[1.0, 0.8, 0.9] };
+    let demagnetised_s = shape.on_s * (1.0 + shape.bulk_v / shape.reflected_v);
+    if demagnetised_s > 0.7 * shape.period_s {
+        shape.on_s *= 0.7 * shape.period_s / demagnetised_s;
     }
-    println!("TALLY {name} {bad} of {}", seeds.end);
-    assert_eq!(bad, 0);
+    (shape, gaps, on_scale)
+}
+
+fn skipping(shape: &Shape) -> BoardFacts {
+    BoardFacts { switching_period_s: Some(shape.period_s), skips_cycles: Some(true), ..BoardFacts::default() }
 }
 
 #[test]
 fn every_cycle_is_classified_over_many_seeds() {
-    tally("every_cycle_is_classified_over_many_seeds", seeds(120), |seed| {
+    for seed in 0..600 {
         let mut random = ChaCha12Rng::seed_from_u64(seed);
-        let mut shape = random_shape(&mut random);
-        let gaps: &[usize] = [&[1][..], &[1, 1, 1, 9], &[1, 3, 1, 2], &[1, 1, 40]][random.random_range(0..4)];
-        let on_scale: &[f64] = if gaps.len() == 1 { &[1.0] } else { &[1.0, 0.8, 0.9] };
-        let demagnetised = shape.on_s * (1.0 + shape.bulk_v / shape.reflected_v);
-        if demagnetised > 0.7 * shape.period_s {
-            shape.on_s *= 0.7 * shape.period_s / demagnetised;
+        let (shape, gaps, on_scale) = shape_with_gaps(&mut random);
+        let (interval_s, count) = [(4e-9, 60_000), (20e-9, 50_000), (200e-9, 10_000)][random.random_range(0..3)];
+        if 0.8 * shape.on_s < 4.0 * interval_s {
+            continue;
         }
-        let fine = [(4e-9, 60_000), (20e-9, 50_000), (200e-9, 10_000)][random.random_range(0..3)];
-        let (interval_s, count) = fine;
-        let (samples, truths) =
-            waveform(&shape, on_scale, gaps, interval_s, count, random.random_range(0.0..8e-6), seed);
+        let phase_s = random.random_range(0.0..8e-6);
+        let (samples, truths) = waveform(&shape, on_scale, gaps, interval_s, count, phase_s, seed);
         let label = format!("seed {seed} interval {interval_s} gaps {gaps:?} {shape:?}");
-        let facts =
-            BoardFacts { switching_period_s: Some(shape.period_s), skips_cycles: Some(true), ..BoardFacts::default() };
-        let Some(found) = segment(&samples, &facts) else { panic!("{label}: nothing found") };
-        compare(&shape, &found, &truths, &samples, &label);
+        let found = segment(&samples, &skipping(&shape)).unwrap_or_else(|| panic!("{label}: nothing found"));
+        compare(&shape, &found, &truths, &samples).unwrap_or_else(|error| panic!("{label}: {error}"));
         assert_eq!(found.collapse, None, "{label}");
-    });
+    }
+}
+
+#[test]
+fn a_record_too_coarse_for_its_turn_ons_is_doubted_or_read_right() {
+    let (mut right, mut doubted, mut refused) = (0, 0, 0);
+    for seed in 0..300 {
+        let mut random = ChaCha12Rng::seed_from_u64(seed);
+        let (shape, gaps, on_scale) = shape_with_gaps(&mut random);
+        let shortest_s = shape.on_s * on_scale.iter().copied().fold(1.0, f64::min);
+        let samples_an_on_state = random.random_range(0.5..8.0);
+        let interval_s = shortest_s / samples_an_on_state;
+        let (samples, truths) = waveform(&shape, on_scale, gaps, interval_s, 4000, 0.0, seed);
+        let label = format!("seed {seed}: {samples_an_on_state} samples an on-state, gaps {gaps:?} {shape:?}");
+        match segment(&samples, &skipping(&shape)) {
+            None => refused += 1,
+            Some(found) if !found.turn_ons_resolved => doubted += 1,
+            Some(found) => {
+                right += 1;
+                compare(&shape, &found, &truths, &samples).unwrap_or_else(|error| panic!("{label}: {error}"));
+                continue;
+            }
+        }
+        assert!(samples_an_on_state < 5.0, "{label}: refused or doubted");
+    }
+    println!("{right} read right, {doubted} doubted, {refused} refused");
 }
 
 #[test]
 fn continuous_conduction_is_told_from_discontinuous() {
-    tally("continuous_conduction_is_told_from_discontinuous", seeds(60), |seed| {
+    for seed in 0..300 {
         let mut random = ChaCha12Rng::seed_from_u64(1000 + seed);
         let mut shape = random_shape(&mut random);
-        // The plateau ends exactly where volt-seconds balance: lengthen the on-time beyond the period's share.
         shape.dither = 0.0;
-        shape.on_s = 1.02 * shape.period_s / (1.0 + shape.bulk_v / shape.reflected_v);
+        // Volt-seconds balance over the period, and the core never empties.
+        shape.on_s = shape.period_s / (1.0 + shape.bulk_v / shape.reflected_v);
+        shape.carried = random.random_range(0.05..2.0);
         let (interval_s, count) = [(4e-9, 40_000), (20e-9, 20_000), (200e-9, 10_000)][random.random_range(0..3)];
         let (samples, truths) = waveform(&shape, &[1.0], &[1], interval_s, count, random.random_range(0.0..8e-6), seed);
         let label = format!("seed {seed} interval {interval_s} {shape:?}");
         let found = segment(&samples, &BoardFacts::default()).unwrap();
-        compare(&shape, &found, &truths, &samples, &label);
+        assert!(truths.iter().all(|truth| truth.mode == CycleMode::Continuous));
+        compare(&shape, &found, &truths, &samples).unwrap_or_else(|error| panic!("{label}: {error}"));
         assert!(found.segments.iter().all(|segment| segment.relaxation.is_none()), "{label}");
-    });
+    }
 }
 
 #[test]
 fn noise_and_bare_rings_hold_no_switching_cycles() {
-    tally("noise_and_bare_rings_hold_no_switching_cycles", seeds(200), |seed| {
-        let mut random = ChaCha12Rng::seed_from_u64(seed);
-        let mut volts: Vec<f64> = (0..5000).map(|_| random.random_range(-1.0..1.0)).collect();
-        if seed % 2 == 1 {
-            let (w, decay) = (random.random_range(0.02..0.3), random.random_range(1e-4..2e-2));
-            volts
-                .iter_mut()
-                .enumerate()
-                .for_each(|(n, v)| *v = 0.02 * *v + 10.0 * (-decay * n as f64).exp() * (w * n as f64).cos());
-        }
+    for seed in 0..1000 {
+        let mut maker = Maker::new(seed);
+        let (w, decay, phase) = (maker.between(0.02, 0.3), maker.between(1e-4, 2e-2), maker.between(0.0, TAU));
+        let ring = |n: usize| 10.0 * (-decay * n as f64).exp() * (w * n as f64 + phase).cos();
+        let (size, band) = match seed % 4 {
+            0 => (0.0, None),
+            1 => (0.0, Some(maker.log_between(0.02, 0.2))),
+            2 => (1.0, None),
+            _ => (1.0, Some(0.1)),
+        };
+        let spread_v = if size == 0.0 { 1.0 } else { 0.02 };
+        let noise = maker.noise(5000, band);
+        let volts = noise.iter().enumerate().map(|(n, noise)| size * ring(n) + spread_v * noise).collect();
         let samples = Samples::new(TimeAxis::Even { start_s: 0.0, interval_s: 1e-8 }, volts).unwrap();
         let found = segment(&samples, &BoardFacts::default());
-        assert!(found.is_none(), "seed {seed}: {found:?}");
-    });
+        assert!(found.is_none(), "seed {seed} w {w} decay {decay} phase {phase} band {band:?}: {found:?}");
+    }
 }
 
-fn seeds(n: u64) -> std::ops::Range<u64> {
-    let k: u64 = std::env::var("SEEDS").ok().and_then(|s| s.parse().ok()).unwrap_or(1);
-    0..n * k
+#[test]
+fn the_conduction_boundary_is_told_as_soon_as_the_ring_has_begun_to_fall() {
+    for seed in 0..200 {
+        let mut random = ChaCha12Rng::seed_from_u64(2000 + seed);
+        let mut shape = random_shape(&mut random);
+        shape.dither = 0.0;
+        let demagnetised_s = shape.on_s * (1.0 + shape.bulk_v / shape.reflected_v);
+        // The core is empty this long before the next turn-on: from the boundary itself to a quarter of a ring period.
+        let empty_s = random.random_range(0.0..0.25) / shape.ring_hz;
+        shape.period_s = demagnetised_s + empty_s;
+        let fallen_v = shape.reflected_v * (1.0 - (TAU * shape.ring_hz * empty_s).cos());
+        let (samples, truths) = waveform(&shape, &[1.0], &[1], 20e-9, 20_000, random.random_range(0.0..8e-6), seed);
+        let label = format!("seed {seed}: {fallen_v} V fallen in {empty_s} s, {shape:?}");
+        let found = segment(&samples, &BoardFacts::default()).unwrap();
+        // Before it has fallen by a sixth of its height the classes can't be told apart, but all cycles must be there.
+        if fallen_v > (0.17 * shape.reflected_v).max(8.0 * shape.noise_v) {
+            compare(&shape, &found, &truths, &samples).unwrap_or_else(|error| panic!("{label}: {error}"));
+        } else {
+            let all = (samples.end_s() / shape.period_s) as usize;
+            assert!(found.turn_ons_s.len().abs_diff(all) <= 1, "{label}: {}", found.turn_ons_s.len());
+        }
+    }
 }

@@ -96,7 +96,16 @@ pub(crate) fn waveform(
     (samples.with_range(Some(shape.step_v), None).unwrap(), truths)
 }
 
-const EDGE_S: f64 = 30e-9;
+/// Lowest voltage of the half ring period before the end of a cycle: where the ring has brought the node down itself, no edge
+/// shows when the switch closed.
+pub(crate) fn valley_v(shape: &Shape, cycle: &True) -> f64 {
+    let step_s = 0.01 / shape.ring_hz;
+    let back = (0..50).map(|n| cycle.end_s - f64::from(n) * step_s).filter(|&t| t > cycle.knee_s);
+    back.map(|t| off_voltage(shape, cycle, t)).fold(f64::INFINITY, f64::min)
+}
+
+/// How long the switch takes to pull the node down.
+pub(crate) const EDGE_S: f64 = 30e-9;
 
 fn voltage(shape: &Shape, cycle: &True, t: f64, before: Option<&True>) -> f64 {
     let since_on = t - cycle.turn_on_s;
