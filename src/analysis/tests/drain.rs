@@ -96,6 +96,36 @@ pub(crate) fn waveform(
     (samples.with_range(Some(shape.step_v), None).unwrap(), truths)
 }
 
+/// Bursts of thirty cycles with a pause of so many periods between them; the reflected voltage grows from a fifth of its end
+/// value in each where the output is charged from zero.
+pub(crate) fn burst_train(
+    shape: &Shape,
+    bursts: usize,
+    grows: bool,
+    pause: usize,
+    interval_s: f64,
+    seed: u64,
+) -> Samples {
+    const CYCLES: usize = 30;
+    let mut volts: Vec<f64> = Vec::new();
+    for burst in 0..bursts {
+        for cycle in 0..CYCLES {
+            let charged = 0.2 + 0.8 * cycle as f64 / (CYCLES - 1) as f64;
+            let reflected_v = shape.reflected_v * if grows { charged } else { 1.0 };
+            // What keeps the cycle discontinuous at the low voltage of an empty output: less is put in.
+            let on_s = shape.on_s * reflected_v / shape.reflected_v;
+            let of_cycle = Shape { reflected_v, on_s, dither: 0.0, ..*shape };
+            let gap = if cycle + 1 == CYCLES { pause } else { 1 };
+            let count = (gap as f64 * shape.period_s / interval_s).round() as usize;
+            let seed = seed + (burst * CYCLES + cycle) as u64;
+            let (piece, _) = waveform(&of_cycle, &[1.0], &[gap], interval_s, count, 0.0, seed);
+            volts.extend_from_slice(piece.volts());
+        }
+    }
+    let samples = Samples::new(TimeAxis::Even { start_s: 0.0, interval_s }, volts).unwrap();
+    samples.with_range(Some(shape.step_v), None).unwrap()
+}
+
 /// Lowest voltage of the half ring period before the end of a cycle: where the ring has brought the node down itself, no edge
 /// shows when the switch closed.
 pub(crate) fn valley_v(shape: &Shape, cycle: &True) -> f64 {
