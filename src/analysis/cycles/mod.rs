@@ -1,6 +1,7 @@
 //! Where each switching cycle, plateau, knee and ring of a drain waveform begins and ends, and the conduction mode of every
 //! cycle.
 
+mod fall;
 mod mode;
 mod off_state;
 mod on_state;
