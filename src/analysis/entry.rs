@@ -15,8 +15,6 @@ const RINGS: usize = 12;
 const WORTH: f64 = 0.5;
 /// Periods at the start of a long ring that may be left out, where large swings bend it out of shape.
 const BENT: usize = 4;
-/// Samples of an on-state below which turn-ons may be missed.
-const ON_SAMPLES: usize = 6;
 /// Periods that must remain of it.
 const REMAIN: f64 = 4.0;
 
@@ -60,7 +58,7 @@ fn drain(samples: &Samples, facts: &BoardFacts) -> Findings {
         findings.peak_drain_voltage_v = None;
         findings.doubt(
             DoubtName::NoSwitchingCycles,
-            "No switching cycles stand in the record; check probe and trigger, or read it as a bare ring-down.",
+            "No switching cycles can be told in the record; check probe, trigger and sample rate, or read it as a bare ring-down.",
         );
         return findings;
     };
@@ -181,15 +179,14 @@ fn spread(values: impl Iterator<Item = f64>) -> Option<Measured> {
 }
 
 fn absences(segmentation: &Segmentation, findings: &mut Findings) {
-    if segmentation.on_samples < ON_SAMPLES {
-        findings.doubt(
-            DoubtName::TooFewPoints,
-            "The on-states hold only a few samples each, so that turn-ons may be missed and gaps be taken for skipped \
-             cycles. Capture a shorter window or at a higher sample rate.",
-        );
-    }
     if let Some(collapse) = &segmentation.collapse {
         findings.doubt(DoubtName::ProtectionOrRestart, collapse);
+    }
+    if !segmentation.turn_ons_resolved {
+        findings.doubt(
+            DoubtName::CoarseSampling,
+            "The shortest on-states last under four samples, so that cycles may be missing: shorten the window.",
+        );
     }
     let whole = || segmentation.segments.iter().filter(|segment| segment.cycle.mode != CycleMode::Incomplete);
     if findings.relaxation_ring.is_none() {

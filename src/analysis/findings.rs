@@ -162,6 +162,8 @@ pub enum DoubtName {
     Clipped,
     /// The vertical step is large against the ring.
     CoarseSteps,
+    /// So few samples an on-state that turn-ons may have been missed.
+    CoarseSampling,
     /// Fewer samples a ring period than a fit needs.
     TooFewPoints,
     /// Fewer ring periods than a fit needs.

@@ -1,6 +1,7 @@
 //! Where each switching cycle, plateau, knee and ring of a drain waveform begins and ends, and the conduction mode of every
 //! cycle.
 
+mod fall;
 mod mode;
 mod off_state;
 mod on_state;
@@ -13,7 +14,7 @@ pub use windows::RingWindow;
 use crate::findings::{BoardFacts, Cycle, CycleMode};
 use crate::waveform::Samples;
 use off_state::{Demagnetisation, demagnetisation};
-use on_state::{OnState, OnStates};
+use on_state::{Levels, OnState, OnStates};
 use std::ops::Range;
 use trace::Trace;
 
@@ -43,8 +44,8 @@ pub struct Segmentation {
     pub on_v: f64,
     /// Standard deviation of the noise in volts.
     pub noise_v: f64,
-    /// Median number of samples in an on-state: with few, turn-ons may be missed.
-    pub on_samples: usize,
+    /// Whether every on-state has enough samples that none can have been missed.
+    pub turn_ons_resolved: bool,
     /// What looks like protection or restart rather than regulation, in words; `None` where nothing does.
     pub collapse: Option<String>,
 }
@@ -62,11 +63,9 @@ pub fn segment(samples: &Samples, facts: &BoardFacts) -> Option<Segmentation> {
     let turn_ons_s: Vec<f64> = found.list.iter().filter(|on| !on.cut_at_start).map(|on| on.turn_on_s).collect();
     mode::classify(&mut segments, &turn_ons_s, facts);
     let collapse = mode::collapse(&segments, &turn_ons_s, facts);
-    let mut on_samples: Vec<usize> = found.list.iter().map(|on| on.end - on.start).collect();
-    on_samples.sort_unstable();
-    let on_samples = on_samples[on_samples.len() / 2];
-    let (on_v, noise_v) = (found.levels.on_v, found.levels.noise_v);
-    Some(Segmentation { segments, turn_ons_s, on_v, noise_v, on_samples, collapse })
+    let turn_ons_resolved = found.are_resolved();
+    let Levels { on_v, noise_v, .. } = found.levels;
+    Some(Segmentation { segments, turn_ons_s, on_v, noise_v, turn_ons_resolved, collapse })
 }
 
 /// One off-state: the on-state before it (`None` at the beginning of the record) and its samples.

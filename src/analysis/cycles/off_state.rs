@@ -37,6 +37,9 @@ const BLOCK_SHARE: f64 = 0.006;
 /// Share of the plateau's height by which the voltage must have left it.
 const DROP: f64 = 0.06;
 
+/// Share of a cosine's height within which its samples tell its phase well.
+const PHASED: f64 = 0.85;
+
 /// Reads one off-state. `built_vs` are the volt-seconds of the on-state before it, where the record shows all of it.
 /// `None` where the range is too short for a plateau.
 pub(super) fn demagnetisation(
@@ -68,25 +71,48 @@ pub(super) fn demagnetisation(
     }
 }
 
-/// Knee from the ring's first fall: a quarter period before the bulk voltage is reached, of which a cosine takes the last third
-/// to fall from half its height.
+/// Knee from the ring's first fall: where the cosine through its samples has its crest.
 fn with_ring(trace: &Trace<'_>, off: Range<usize>, bulk_v: f64, fall: usize) -> Option<Demagnetisation> {
     let start_s = trace.time_s(off.start);
-    let fall_s = trace.crossing_s(fall, bulk_v);
     let mut plateau_v = middle_level(trace, off.start..fall);
-    let mut knee_s = fall_s;
+    let mut knee_s = trace.crossing_s(fall, bulk_v);
     let mut plateau = trace.line(off.start..fall)?;
     for _ in 0..2 {
-        let half_v = bulk_v + 0.5 * (plateau_v - bulk_v);
-        let half = (off.start..fall).rev().find(|&index| trace.volts[index] >= half_v).unwrap_or(off.start);
-        let half_s = trace.crossing_s(half + 1, half_v);
-        knee_s = (fall_s - 3.0 * (fall_s - half_s)).max(start_s);
+        knee_s = crest_s(trace, off.clone(), fall, bulk_v, plateau_v - bulk_v).max(start_s);
         let length_s = knee_s - start_s;
         let late = trace.between(start_s + 0.5 * length_s, knee_s - 0.08 * length_s);
         plateau = trace.line(late).or_else(|| trace.line(off.start..fall))?;
-        plateau_v = plateau.at(knee_s);
+        // Not at the knee: what is left of the leakage ring tilts a short line.
+        plateau_v = plateau.middle_v();
     }
     Some(Demagnetisation { plateau, knee_s: Some(knee_s), fall: Some(fall) })
+}
+
+/// When a cosine of this height about the bulk voltage, whose fall leads through sample `fall`, had its crest: from the line of
+/// its phase over time, or, where too few samples stand in the fall, from the crossings of half its height and of the bulk
+/// voltage, a third and the whole of a quarter period before.
+fn crest_s(trace: &Trace<'_>, off: Range<usize>, fall: usize, bulk_v: f64, height_v: f64) -> f64 {
+    let last_above = |v: f64| (off.start..fall).rev().find(|&index| trace.volts[index] >= v).unwrap_or(off.start);
+    let share = |index: usize| (trace.volts[index] - bulk_v) / height_v;
+    let first = last_above(bulk_v + PHASED * height_v) + 1;
+    let last = (fall..off.end).find(|&index| share(index) < -0.3).unwrap_or(off.end);
+    let points = (first..last).filter(|&index| share(index).abs() < PHASED);
+    let (mut count, mut sum, mut sum_s, mut square, mut product) = (0.0, 0.0, 0.0, 0.0, 0.0);
+    let fall_s = trace.crossing_s(fall, bulk_v);
+    for index in points {
+        let (phase, time_s) = (share(index).acos(), trace.time_s(index) - fall_s);
+        count += 1.0;
+        sum += phase;
+        sum_s += time_s;
+        square += phase * phase;
+        product += phase * time_s;
+    }
+    let seconds_per_radian = (count * product - sum * sum_s) / (count * square - sum * sum);
+    if count >= 4.0 && seconds_per_radian > 0.0 {
+        return fall_s + (sum_s - seconds_per_radian * sum) / count;
+    }
+    let half_v = bulk_v + 0.5 * height_v;
+    fall_s - 3.0 * (fall_s - trace.crossing_s(last_above(half_v) + 1, half_v))
 }
 
 /// No fall through the bulk voltage: either the secondary conducts to the end, or the knee has just been passed. Right before
@@ -94,7 +120,9 @@ fn with_ring(trace: &Trace<'_>, off: Range<usize>, bulk_v: f64, fall: usize) -> 
 fn without_ring(trace: &Trace<'_>, off: Range<usize>, levels: &Levels, bulk_v: f64) -> Option<Demagnetisation> {
     let (start_s, end_s) = (trace.time_s(off.start), trace.time_s(off.end - 1));
     let length_s = end_s - start_s;
-    let plateau = trace.line(trace.between(start_s + 0.5 * length_s, start_s + 0.85 * length_s))?;
+    let before = trace.between(start_s + 0.5 * length_s, start_s + 0.85 * length_s);
+    let points = before.len() as f64;
+    let plateau = trace.line(before)?;
     let block = ((BLOCK_SHARE * off.len() as f64) as usize).max(BLOCK);
     let drop_v = |end: usize| {
         let range = end.saturating_sub(block).max(off.start)..end;
@@ -103,8 +131,10 @@ fn without_ring(trace: &Trace<'_>, off: Range<usize>, levels: &Levels, bulk_v: f
     };
     let last_v = drop_v(off.end);
     let height_v = plateau.at(end_s) - bulk_v;
-    let blur_v = levels.noise_v / (block as f64).sqrt();
-    if last_v < (DROP * height_v).max(5.0 * blur_v) {
+    // Noise of the block's mean, and of the line there, which lies 0.325 lengths beyond the middle of its 0.35.
+    let blur_v = levels.noise_v * (1.0 / block as f64 + (1.0 + 12.0 * (0.325_f64 / 0.35).powi(2)) / points).sqrt();
+    // The last sample may already stand in the edge: what comes before it must have begun to fall as well.
+    if last_v < (DROP * height_v).max(5.0 * blur_v) || drop_v(off.end - 1) < 2.0 * blur_v {
         let late = trace.between(start_s + 0.5 * length_s, end_s);
         let plateau = trace.line(late).unwrap_or(plateau);
         return Some(Demagnetisation { plateau, knee_s: None, fall: None });

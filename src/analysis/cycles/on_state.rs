@@ -1,7 +1,9 @@
 //! Where the switch conducts: levels by histogram mode (IEEE 181), runs at the lower level, and which of those runs are
 //! on-states and not a ring that swings down to the body diode.
 
+use super::fall::{Fall, opens};
 use super::trace::Trace;
+use std::ops::Range;
 
 /// Levels of the record.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -51,36 +53,29 @@ pub(super) struct OnStates {
 }
 
 /// Share of the way from the on-state to the mean below which a run begins, and above which it ends.
-const ENTER: f64 = 0.25;
-const LEAVE: f64 = 0.35;
+pub(super) const ENTER: f64 = 0.25;
+pub(super) const LEAVE: f64 = 0.35;
 
-/// Shares of that way from which a fall is timed down to where the run begins: the edge may start from a ring's trough.
-const HIGH: [f64; 3] = [0.75, 0.6, 0.45];
+/// Samples below which most on-states are not told from noise.
+const BLIP: usize = 3;
 
-/// An edge steeper than a ring of this swing and quarter period by this factor is a switch that closes.
-const STEEP: f64 = 2.2;
+/// Share of the way from the on-state to the mean within which a level is one, and share of an on-state's samples that stand there.
+const ONE_LEVEL: f64 = 0.12;
+const FLAT: f64 = 0.7;
 
-/// Samples that most on-states must have: fewer can be told from noise by nothing.
-const LEAST_SAMPLES: usize = 3;
-
-/// Length of a turn-on's edge, from its beginning to a quarter of its height, over the time of its middle half: a switch that
-/// closes against the recovering rectifier begins slowly.
-const EDGE: f64 = 4.0;
-
-/// Samples within the middle half of an edge from which on its beginning is told by time and not by sample.
-const RESOLVED: f64 = 3.0;
+/// Samples in the shortest on-state from which on none is missed.
+const SHORTEST: usize = 4;
 
 /// Volt-seconds that a run adds over volt-seconds that the swing before it took: at most 1.5 for a ring that touches zero
 /// (the body diode carries no more than the ring brought), a multiple of that where the switch takes up energy.
-const ENERGISING: f64 = 2.25;
+const ENERGISING: f64 = 3.0;
 
-/// The on-states of a record; `None` where there is no lower level that stands clear of the noise, or the samples are too far
-/// apart to show one.
+/// The on-states of a record; `None` where there is no lower level that stands clear of the noise.
 pub(super) fn find(trace: &Trace<'_>) -> Option<OnStates> {
     let (on_v, mean_v) = levels(trace)?;
     let step_noise_v = trace.samples.step_v().unwrap_or(0.0) / 12_f64.sqrt();
     let runs = runs(trace, on_v + ENTER * (mean_v - on_v), on_v + LEAVE * (mean_v - on_v));
-    let noise_v = noise(trace, &runs)?.max(step_noise_v);
+    let noise_v = noise(trace, &runs).max(step_noise_v);
     if mean_v - on_v < 8.0 * noise_v.max(1e-12 * mean_v.abs()) {
         return None;
     }
@@ -89,11 +84,45 @@ pub(super) fn find(trace: &Trace<'_>) -> Option<OnStates> {
     for run in runs {
         found.take(trace, run);
     }
-    let resolved = found.list.iter().filter(|on| on.end - on.start >= LEAST_SAMPLES).count();
-    (resolved > 0 && 2 * resolved >= found.list.len()).then_some(found)
+    (!found.list.is_empty() && found.is_one_level(trace)).then_some(found)
 }
 
 impl OnStates {
+    /// Samples in each on-state that is seen whole, in order of length.
+    fn lengths(&self) -> Vec<usize> {
+        let whole = self.list.iter().filter(|on| !on.cut_at_start && !on.cut_at_end);
+        let mut lengths: Vec<usize> = whole.map(|on| on.end - on.start).collect();
+        lengths.sort_unstable();
+        lengths
+    }
+
+    /// Whether most on-states last some samples and stay at one level, as no noise does.
+    fn is_one_level(&self, trace: &Trace<'_>) -> bool {
+        let lengths = self.lengths();
+        if lengths.get(lengths.len() / 2).is_some_and(|&middle| middle < BLIP) {
+            return false;
+        }
+        let flat = self.list.iter().filter(|on| self.flat_share(trace, on.start..on.end) > FLAT).count();
+        4 * flat > 3 * self.list.len()
+    }
+
+    fn is_flat(&self, trace: &Trace<'_>, run: Run) -> bool {
+        run.end - run.start >= BLIP && self.flat_share(trace, run.start..run.end) > 0.9
+    }
+
+    /// Share of samples that stand at the on-state's level.
+    fn flat_share(&self, trace: &Trace<'_>, range: Range<usize>) -> f64 {
+        let Levels { on_v, mean_v, noise_v } = self.levels;
+        let near_v = (ONE_LEVEL * (mean_v - on_v)).max(1.5 * noise_v);
+        let count = range.len() as f64;
+        trace.volts[range].iter().filter(|&&v| (v - on_v).abs() < near_v).count() as f64 / count
+    }
+
+    /// Whether no on-state is so short in samples that another may have been missed.
+    pub(super) fn are_resolved(&self) -> bool {
+        self.lengths().first().is_none_or(|&shortest| shortest >= SHORTEST)
+    }
+
     fn take(&mut self, trace: &Trace<'_>, run: Run) {
         let Levels { on_v, mean_v, .. } = self.levels;
         let floor = self.list.last().map_or(0, |on| on.end).max(self.swings.last().map_or(0, |swing| swing.end));
@@ -101,74 +130,38 @@ impl OnStates {
         let fall = Fall::read(trace, run.start, floor, &self.levels);
         let taken_vs = above_vs(trace, fall.crest, run.start, mean_v);
         let added_vs = -trace.area_vs(run.start, run.end.min(trace.len() - 1), mean_v);
-        if !cut_at_start && !fall.is_steep(trace, &self.levels) && added_vs < ENERGISING * taken_vs {
+        // A sample more or less of a coarse crest, and of a crest cut by the record's beginning it is not known what it took.
+        let slack_vs = (trace.volts[fall.crest] - mean_v).max(0.0) * trace.samples.mean_interval_s();
+        let energised = (fall.is_whole(trace, run, &self.levels) && added_vs >= ENERGISING * (taken_vs + slack_vs))
+            || fall.is_steep(trace, &self.levels)
+            || fall.rises_higher(trace, run, &self.levels)
+            || opens(trace, run.end, &self.levels);
+        // A ring may begin in its trough.
+        let energised =
+            if cut_at_start { opens(trace, run.end, &self.levels) || self.is_flat(trace, run) } else { energised };
+        if !energised {
             if cut_at_end {
                 self.end = fall.crest + 1;
             }
             self.swings.push(run);
             return;
         }
-        let edge = if cut_at_start { 0 } else { fall.edge(trace, run.start, &self.levels) };
-        let turn_on_s = if cut_at_start { trace.time_s(0) } else { fall.low_s };
+        let valley = fall.valley_end(trace, run, &self.levels).filter(|_| !cut_at_start);
+        let (edge, start, turn_on_s) = match valley {
+            _ if cut_at_start => (0, run.start, trace.time_s(0)),
+            Some(low) => (low - 1, low, trace.time_s(low - 1)),
+            None => (fall.edge(trace, run.start, &self.levels), run.start, fall.low_s),
+        };
         let turn_off_s = if cut_at_end {
             trace.time_s(trace.len() - 1)
         } else {
             trace.crossing_s(run.end, on_v + LEAVE * (mean_v - on_v))
         };
-        let on = OnState { edge, start: run.start, end: run.end, turn_on_s, turn_off_s, cut_at_start, cut_at_end };
+        let on = OnState { edge, start, end: run.end, turn_on_s, turn_off_s, cut_at_start, cut_at_end };
         match self.list.last_mut().filter(|last| is_spike(trace, last, &on, mean_v)) {
             Some(last) => (last.end, last.turn_off_s, last.cut_at_end) = (on.end, on.turn_off_s, on.cut_at_end),
             None => self.list.push(on),
         }
-    }
-}
-
-/// A fall to the lower level.
-struct Fall {
-    /// First sample it can have come from.
-    floor: usize,
-    /// Sample it came from.
-    crest: usize,
-    /// Last sample above the mean; the crest where that is none.
-    crossing: usize,
-    /// When the run begins.
-    low_s: f64,
-    /// Steepest way down to there.
-    slope_v_per_s: f64,
-    /// Time in which that slope falls by half of the mean.
-    half_s: f64,
-}
-
-impl Fall {
-    fn read(trace: &Trace<'_>, start: usize, floor: usize, levels: &Levels) -> Self {
-        let height_v = levels.mean_v - levels.on_v;
-        let crest = crest_before(trace, start, floor, levels);
-        let last_above = |v: f64| (crest..start).rev().find(|&index| trace.volts[index] >= v);
-        let crossing = last_above(levels.mean_v).unwrap_or(crest);
-        let low_s = trace.crossing_s(start, levels.on_v + ENTER * height_v);
-        let slope = |share: f64| {
-            let high_v = levels.on_v + share * height_v;
-            let high_s = trace.crossing_s(last_above(high_v)? + 1, high_v);
-            Some((share - ENTER) * height_v / (low_s - high_s))
-        };
-        let slope_v_per_s = HIGH.into_iter().filter_map(slope).fold(0.0, f64::max);
-        Self { floor, crest, crossing, low_s, slope_v_per_s, half_s: 0.5 * height_v / slope_v_per_s }
-    }
-
-    /// Last sample before the edge of a switch that closes.
-    fn edge(&self, trace: &Trace<'_>, start: usize, levels: &Levels) -> usize {
-        if self.half_s.is_finite() && self.half_s > RESOLVED * trace.samples.mean_interval_s() {
-            return trace.samples.index_at(self.low_s - EDGE * self.half_s).saturating_sub(1).max(self.floor);
-        }
-        edge_before(trace, self.crest, start, levels.noise_v)
-    }
-
-    /// Whether it is faster than a ring of its own swing could be, whose steepest slope is its swing times its angular frequency.
-    fn is_steep(&self, trace: &Trace<'_>, levels: &Levels) -> bool {
-        let swing_v = trace.volts[self.crest] - levels.mean_v;
-        let quarter_s = trace.time_s(self.crossing) - trace.time_s(self.crest);
-        let ring_v_per_s = swing_v.max(0.0) * std::f64::consts::FRAC_PI_2 / quarter_s;
-        quarter_s > 0.0 && self.slope_v_per_s > STEEP * ring_v_per_s
     }
 }
 
@@ -220,9 +213,8 @@ fn runs(trace: &Trace<'_>, enter_v: f64, leave_v: f64) -> Vec<Run> {
     runs
 }
 
-/// Noise from second differences inside the longest runs, where the voltage is a straight line; `None` where no run is long
-/// enough to tell.
-fn noise(trace: &Trace<'_>, runs: &[Run]) -> Option<f64> {
+/// Noise from second differences inside the longest runs, where the voltage is a straight line.
+fn noise(trace: &Trace<'_>, runs: &[Run]) -> f64 {
     let longest = runs.iter().map(|run| run.end - run.start).max().unwrap_or(0);
     let mut differences = Vec::new();
     for run in runs.iter().filter(|run| (run.end - run.start) * 2 >= longest) {
@@ -236,36 +228,11 @@ fn noise(trace: &Trace<'_>, runs: &[Run]) -> Option<f64> {
         }
     }
     if differences.is_empty() {
-        return None;
+        return 0.0;
     }
     let middle = differences.len() / 2;
     let (_, median, _) = differences.select_nth_unstable_by(middle, f64::total_cmp);
-    Some(*median / (0.6745 * 6_f64.sqrt()))
-}
-
-/// A ring that swings to zero takes at most this many times as long from its crest to the mean as from the mean to the lower
-/// level, even where it would swing as far below zero as it can.
-const QUARTER: f64 = 3.0;
-
-/// The crest a fall came from: going back from the fall, the highest sample before the voltage is clearly lower again, not
-/// before `floor` and no further back than a ring could have come.
-fn crest_before(trace: &Trace<'_>, fall: usize, floor: usize, levels: &Levels) -> usize {
-    let mut crest = fall;
-    let mut earliest = floor;
-    for index in (floor..fall).rev() {
-        let (v, crest_v) = (trace.volts[index], trace.volts[crest]);
-        if v >= crest_v {
-            crest = index;
-        }
-        if index < earliest || v < crest_v - (6.0 * levels.noise_v).max(0.1 * (crest_v - levels.on_v)) {
-            break;
-        }
-        if earliest == floor && v > levels.mean_v {
-            let fall_s = trace.time_s(fall) - trace.time_s(index);
-            earliest = trace.samples.index_at(trace.time_s(index) - QUARTER * fall_s).max(floor);
-        }
-    }
-    crest
+    *median / (0.6745 * 6_f64.sqrt())
 }
 
 /// Volt-seconds above the mean between two samples; what lies below does not count.
@@ -275,13 +242,4 @@ fn above_vs(trace: &Trace<'_>, from: usize, to: usize, mean_v: f64) -> f64 {
         height_v.max(0.0) * (trace.time_s(index + 1) - trace.time_s(index))
     };
     (from..to).map(piece).sum()
-}
-
-/// Last sample that is surely before the steep part of a fall: the one after it may have caught its beginning.
-fn edge_before(trace: &Trace<'_>, crest: usize, fall: usize, noise_v: f64) -> usize {
-    let drop = |index: usize| trace.volts[index] - trace.volts[index + 1];
-    let last = (fall + 1).min(trace.len() - 1);
-    let Some(steepest) = (crest..last).max_by(|&a, &b| drop(a).total_cmp(&drop(b))) else { return crest };
-    let limit = (0.03 * drop(steepest)).max(6.0 * noise_v).min(0.15 * drop(steepest));
-    (crest..=steepest).rev().find(|&index| drop(index) < limit).unwrap_or(crest).min(fall.saturating_sub(1))
 }

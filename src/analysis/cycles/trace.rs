@@ -22,6 +22,11 @@ impl Line {
     pub(super) fn at(&self, time_s: f64) -> f64 {
         self.at_v + self.slope_v_per_s * (time_s - self.at_s)
     }
+
+    /// Mean of the samples it was laid through.
+    pub(super) fn middle_v(&self) -> f64 {
+        self.at_v
+    }
 }
 
 impl<'a> Trace<'a> {

@@ -24,6 +24,8 @@ pub(crate) struct Shape {
     pub(crate) reflected_v: f64,
     pub(crate) on_drop_v: f64,
     pub(crate) on_s: f64,
+    /// Volt-seconds still in the core at turn-on, as a share of those that an on-time adds: 0 where the core is empty.
+    pub(crate) carried: f64,
     pub(crate) period_s: f64,
     pub(crate) ring_hz: f64,
     pub(crate) ring_decay_per_s: f64,
@@ -41,6 +43,7 @@ pub(crate) struct Shape {
 pub(crate) struct True {
     pub(crate) turn_on_s: f64,
     pub(crate) turn_off_s: f64,
+    /// When the core would be empty; beyond the end in continuous conduction.
     pub(crate) knee_s: f64,
     pub(crate) end_s: f64,
     pub(crate) mode: CycleMode,
@@ -64,13 +67,14 @@ pub(crate) fn waveform(
         let wobble = 1.0 + shape.dither * random.random_range(-1.0..1.0);
         let end_s = at_s + shape.period_s * gap as f64 * wobble;
         let on_s = shape.on_s * on_scale[index % on_scale.len()];
-        let knee_s = at_s + on_s + on_s * shape.bulk_v / shape.reflected_v;
+        let turn_off_s = at_s + on_s;
+        let knee_s = turn_off_s + on_s * (1.0 + shape.carried) * shape.bulk_v / shape.reflected_v;
         let mode = match (knee_s < end_s, gap) {
             (false, _) => CycleMode::Continuous,
             (true, 1) => CycleMode::Discontinuous,
             _ => CycleMode::Skipped,
         };
-        truths.push(True { turn_on_s: at_s, turn_off_s: at_s + on_s, knee_s, end_s, mode });
+        truths.push(True { turn_on_s: at_s, turn_off_s, knee_s, end_s, mode });
         at_s = end_s;
         if at_s > interval_s * count as f64 {
             break;
@@ -84,8 +88,7 @@ pub(crate) fn waveform(
         while t >= truths[cycle].end_s {
             cycle += 1;
         }
-        let on_s = shape.on_s * on_scale[cycle % on_scale.len()];
-        let clean = voltage(shape, on_s, &truths[cycle], t, cycle.checked_sub(1).map(|before| &truths[before]));
+        let clean = voltage(shape, &truths[cycle], t, cycle.checked_sub(1).map(|before| &truths[before]));
         let noisy = clean + noise.sample(&mut random);
         volts.push((noisy / shape.step_v).round() * shape.step_v);
     }
@@ -93,28 +96,69 @@ pub(crate) fn waveform(
     (samples.with_range(Some(shape.step_v), None).unwrap(), truths)
 }
 
-const EDGE_S: f64 = 30e-9;
+/// Bursts of thirty cycles with a pause of so many periods between them; the reflected voltage grows from a fifth of its end
+/// value in each where the output is charged from zero.
+pub(crate) fn burst_train(
+    shape: &Shape,
+    bursts: usize,
+    grows: bool,
+    pause: usize,
+    interval_s: f64,
+    seed: u64,
+) -> Samples {
+    const CYCLES: usize = 30;
+    let mut volts: Vec<f64> = Vec::new();
+    for burst in 0..bursts {
+        for cycle in 0..CYCLES {
+            let charged = 0.2 + 0.8 * cycle as f64 / (CYCLES - 1) as f64;
+            let reflected_v = shape.reflected_v * if grows { charged } else { 1.0 };
+            // What keeps the cycle discontinuous at the low voltage of an empty output: less is put in.
+            let on_s = shape.on_s * reflected_v / shape.reflected_v;
+            let of_cycle = Shape { reflected_v, on_s, dither: 0.0, ..*shape };
+            let gap = if cycle + 1 == CYCLES { pause } else { 1 };
+            let count = (gap as f64 * shape.period_s / interval_s).round() as usize;
+            let seed = seed + (burst * CYCLES + cycle) as u64;
+            let (piece, _) = waveform(&of_cycle, &[1.0], &[gap], interval_s, count, 0.0, seed);
+            volts.extend_from_slice(piece.volts());
+        }
+    }
+    let samples = Samples::new(TimeAxis::Even { start_s: 0.0, interval_s }, volts).unwrap();
+    samples.with_range(Some(shape.step_v), None).unwrap()
+}
 
-fn voltage(shape: &Shape, on_s: f64, cycle: &True, t: f64, before: Option<&True>) -> f64 {
+/// Lowest voltage of the half ring period before the end of a cycle: where the ring has brought the node down itself, no edge
+/// shows when the switch closed.
+pub(crate) fn valley_v(shape: &Shape, cycle: &True) -> f64 {
+    let step_s = 0.01 / shape.ring_hz;
+    let back = (0..50).map(|n| cycle.end_s - f64::from(n) * step_s).filter(|&t| t > cycle.knee_s);
+    back.map(|t| off_voltage(shape, cycle, t)).fold(f64::INFINITY, f64::min)
+}
+
+/// How long the switch takes to pull the node down.
+pub(crate) const EDGE_S: f64 = 30e-9;
+
+fn voltage(shape: &Shape, cycle: &True, t: f64, before: Option<&True>) -> f64 {
     let since_on = t - cycle.turn_on_s;
     if since_on < EDGE_S {
         // The switch takes its time to pull the node down from wherever it was.
-        let from_v = before
-            .map_or(shape.bulk_v, |before| off_voltage(shape, before, before.end_s, before.end_s - before.turn_off_s));
+        let from_v = before.map_or(shape.bulk_v, |before| off_voltage(shape, before, before.end_s));
         return from_v + (shape.on_drop_v * 0.2 - from_v) * (since_on / EDGE_S);
     }
-    if since_on < on_s {
-        return shape.on_drop_v * since_on / on_s;
+    if t < cycle.turn_off_s {
+        return shape.on_drop_v * since_on / (cycle.turn_off_s - cycle.turn_on_s);
     }
-    off_voltage(shape, cycle, t, since_on - on_s)
+    off_voltage(shape, cycle, t)
 }
 
-fn off_voltage(shape: &Shape, cycle: &True, t: f64, since_off: f64) -> f64 {
+fn off_voltage(shape: &Shape, cycle: &True, t: f64) -> f64 {
+    let since_off = t - cycle.turn_off_s;
     let plateau_v = shape.bulk_v + shape.reflected_v;
     if t > cycle.knee_s {
         let since = t - cycle.knee_s;
-        let v = shape.bulk_v
-            + shape.reflected_v * (-shape.ring_decay_per_s * since).exp() * (TAU * shape.ring_hz * since).cos();
+        // From rest: no current flows at the knee, so the voltage leaves the plateau without a kink.
+        let (w, decay) = (TAU * shape.ring_hz, shape.ring_decay_per_s);
+        let ring = (-decay * since).exp() * ((w * since).cos() + decay / w * (w * since).sin());
+        let v = shape.bulk_v + shape.reflected_v * ring;
         // The body diode holds the node.
         return v.max(-0.7);
     }
