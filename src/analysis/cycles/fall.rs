@@ -16,7 +16,7 @@ const STEEP: f64 = 3.0;
 const EDGE: f64 = 4.0;
 
 /// Samples within the middle half of an edge from which on its beginning is told by time and not by sample.
-const RESOLVED: f64 = 3.0;
+const RESOLVED: f64 = 2.0;
 
 /// Share of the crest before a run by which the voltage behind it must at least rise.
 const HIGHER: f64 = 1.03;

@@ -20,6 +20,9 @@ pub struct RingWindow {
     pub centre_v: f64,
 }
 
+/// Half-cycles of a leakage ring that are enough without its first period.
+const ENOUGH: usize = 12;
+
 /// Half-cycles kept behind the last visible crossing: they hold the centre.
 const TAIL: f64 = 4.0;
 
@@ -98,7 +101,11 @@ pub(super) fn leakage(
     let flattened = |half: &HalfCycle| {
         half.height_v > 0.0 && (half.top_s > 0.42 * half.duration_s() || half.duration_s() > 1.3 * typical_s)
     };
-    let released = halves.iter().take(8).rposition(flattened).unwrap_or(0);
+    let mut released = halves.iter().take(8).rposition(flattened).unwrap_or(0);
+    // The first period still carries the diode's recovery, and its swing bends the ring most: spared where enough follows.
+    if halves.len() >= released + 2 + ENOUGH {
+        released += 2;
+    }
     let start = halves.get(released)?.end;
     window(trace, start..end, halves.get(released + 1..)?, plateau.at(trace.time_s(start)))
 }
