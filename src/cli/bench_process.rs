@@ -63,8 +63,13 @@ impl BenchProcess {
             Ok(announcement) => Ok(Self { announcement, child }),
             Err(error) => {
                 drop(child.stdin.take());
-                let ended = child.wait().map(|status| status.to_string()).unwrap_or_default();
-                Err(failed(format!("it announced nothing usable ({error}; {ended})")))
+                let status = child.wait().map_err(|error| failed(error.to_string()))?;
+                if status.code() == Some(2) {
+                    return Err(CliError::Usage(
+                        "the simulated bench does not take these options, as it says above".into(),
+                    ));
+                }
+                Err(failed(format!("it announced nothing usable ({error}; {status})")))
             }
         }
     }

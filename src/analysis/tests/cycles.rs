@@ -303,9 +303,9 @@ fn the_leakage_ring_begins_behind_the_flat_top_of_the_clamp() {
             };
             let Some(leakage) = &segment.leakage else { continue };
             let start_s = samples.time_s(leakage.samples.start) - truth.turn_off_s;
-            // Behind the release, and not a whole period of the ring given away.
+            // Behind the release, one period spared at most, and not a whole one given away besides.
             assert!(
-                (released_s..released_s + 1.0 / shape.leak_hz).contains(&start_s),
+                (released_s..released_s + 2.0 / shape.leak_hz).contains(&start_s),
                 "seed {seed}: {start_s} {released_s} {shape:?}"
             );
             let period = leakage.period_s * shape.leak_hz;
