@@ -163,7 +163,7 @@ fn a_source_whose_plug_is_pulled_is_not_called_off_and_the_operator_is_told() {
     left_in_order(&ended, "source");
     assert!(!ended.on[1], "the load is off: {}", ended.said);
     assert!(!ended.said.contains("source confirmed off"), "{}", ended.said);
-    assert!(ended.said.contains("emergency switch"), "{}", ended.said);
+    assert!(ended.said.contains("source NOT CONFIRMED OFF: cut it with the emergency switch"), "{}", ended.said);
 }
 
 #[test]

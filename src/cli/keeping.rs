@@ -7,6 +7,7 @@ use ringstep::{
     sequence::{
         KeepError, Keeper,
         event::{Capture, Event, Purpose},
+        outputs,
     },
     transport::{ExchangeEntry, ExchangeSink},
 };
@@ -89,6 +90,10 @@ impl Progress {
 
     fn show(&self, event: &Event) {
         match (self, sentence(event)) {
+            // However quiet: someone must know that it may be live.
+            (Self::Quiet, Some((text, _))) if matches!(event, Event::SafeOff { source_off: false, .. }) => {
+                output::note(&text);
+            }
             (Self::Quiet, _) | (_, None) => {}
             (Self::Lines, Some((text, true))) => output::note(&text),
             (Self::Lines, Some((_, false))) => {}
@@ -138,11 +143,7 @@ fn sentence(event: &Event) -> Option<(String, bool)> {
         }
         Event::PointRefused { line_v, reason, .. } => kept(format!("  {line_v} V: not measured: {reason}")),
         Event::Noted { note } => kept(format!("  note: {note}")),
-        Event::SafeOff { source_off, load_off, .. } => kept(format!(
-            "source {}, load {}",
-            if *source_off { "confirmed off" } else { "NOT CONFIRMED OFF: switch it off by hand" },
-            if *load_off { "confirmed off" } else { "NOT CONFIRMED OFF" }
-        )),
+        Event::SafeOff { source_off, load_off, .. } => kept(outputs(*source_off, *load_off)),
         Event::Settled { line_v, load, .. } => {
             Some((format!("  settled at {line_v} V, {:.2} W", load.power_w()), false))
         }

@@ -12,6 +12,14 @@ pub enum RunError {
     /// The record could not be written.
     #[error(transparent)]
     Keep(#[from] KeepError),
+    /// The end of the run could not be written; safe-off was reached before.
+    #[error("{error}; {outputs}")]
+    Unrecorded {
+        /// What failed.
+        error: KeepError,
+        /// What is known of source and load.
+        outputs: String,
+    },
     /// The output never came into regulation.
     #[error(
         "output {output} stood at {voltage_v:.3} V after {waited_s:.1} s at {line_v} V line and {load_a:.3} A load, outside \

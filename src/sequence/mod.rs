@@ -24,6 +24,6 @@ pub use error::RunError;
 pub use keeper::{KeepError, Keeper};
 pub use plan::*;
 pub use preflight::*;
-pub use runner::{Job, run};
+pub use runner::{Job, outputs, run};
 pub use samples::samples_of;
 pub use stop::{Stop, Stopper};

@@ -61,13 +61,23 @@ pub async fn run(
         Err(error) => (Outcome::Failed, Some(error.to_string())),
     };
     let reason = message.clone().unwrap_or_else(|| "finished".into());
-    keeper.event(&Event::SafeOff {
-        reason,
-        source_off: off.source.is_confirmed(),
-        load_off: off.load.is_confirmed(),
-    })?;
-    keeper.event(&Event::RunEnded { outcome, message: message.clone() })?;
+    let (source_off, load_off) = (off.source.is_confirmed(), off.load.is_confirmed());
+    let kept = keeper
+        .event(&Event::SafeOff { reason, source_off, load_off })
+        .and_then(|()| keeper.event(&Event::RunEnded { outcome, message: message.clone() }));
+    // The record can't tell any more, so the error must.
+    kept.map_err(|error| RunError::Unrecorded { error, outputs: outputs(source_off, load_off) })?;
     Ok((outcome, message))
+}
+
+/// What is known of the outputs after safe-off, and what to do about it.
+pub fn outputs(source_off: bool, load_off: bool) -> String {
+    let source = match source_off {
+        true => "source confirmed off",
+        false => "source NOT CONFIRMED OFF: cut it with the emergency switch and treat the board as live",
+    };
+    let load = if load_off { "load confirmed off" } else { "load NOT CONFIRMED OFF" };
+    format!("{source}, {load}")
 }
 
 fn panicked(panic: &(dyn Any + Send)) -> String {
