@@ -104,12 +104,23 @@ fn ring(frequency_hz: f64, decay: f64) -> Ring {
         damped_frequency_hz: measured(frequency_hz * 0.9999, 2e-4),
         decay_per_s: measured(decay, 0.01),
         quality_factor: measured(TAU * frequency_hz / (2.0 * decay), 0.01),
+        amplitude_v: 100.0,
     }
 }
 
 fn fit(kind: RingKind, start_s: f64, end_s: f64, parameters: [f64; 6]) -> RingFit {
     let stopped = "relative step below 1e-9".into();
-    RingFit { kind, start_s, end_s, parameters, covariance: vec![0.0; 36], residual_v: 0.18, stopped, accepted: true }
+    RingFit {
+        kind,
+        start_s,
+        end_s,
+        parameters,
+        covariance: vec![0.0; 36],
+        curve: Default::default(),
+        residual_v: 0.18,
+        stopped,
+        accepted: true,
+    }
 }
 
 fn findings(purpose: Purpose, bulk_v: f64) -> Findings {

@@ -192,6 +192,7 @@ fn a_refused_fit_with_no_covariance_still_reaches_the_journal() {
         end_s: 1e-6,
         parameters: [1.0, f64::NAN, 3.0, 4.0, 5.0, 6.0],
         covariance: vec![f64::INFINITY; 36],
+        curve: Default::default(),
         residual_v: f64::NAN,
         stopped: "no progress".into(),
         accepted: false,

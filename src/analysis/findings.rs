@@ -65,6 +65,10 @@ pub struct Ring {
     pub decay_per_s: Measured,
     /// `w0 / (2 gamma)`.
     pub quality_factor: Measured,
+    /// Amplitude in volts at which decay and quality factor hold: that at the start of the window. The frequency is that of small
+    /// swings.
+    #[serde(default)]
+    pub amplitude_v: f64,
 }
 
 /// One switching cycle: from a turn-on to the next.
@@ -106,8 +110,9 @@ pub enum RingKind {
     Leakage,
 }
 
-/// One fitted ring: `v(t) = offset + slope t + amplitude exp(-decay t) cos(2 pi damped_frequency t + phase)`, with `t`
-/// counted from `start_s`.
+/// One fitted ring. Its parameters are those of `v(t) = offset + slope t + amplitude exp(-decay t) cos(2 pi damped_frequency t +
+/// phase)`, with `t` counted from `start_s`; where the samples asked for more than that, `curve` has the rest, and the parameters
+/// are those at small swings, of the beginning.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 pub struct RingFit {
     /// Which ring.
@@ -119,6 +124,9 @@ pub struct RingFit {
     /// Parameters in the order of [`RingFit::PARAMETERS`], SI.
     #[serde(deserialize_with = "null_is_nan::array")]
     pub parameters: [f64; 6],
+    /// The curve that was fitted, which may be more than a damped sinusoid.
+    #[serde(default)]
+    pub curve: FittedCurve,
     /// Covariance of the parameters, row by row; not finite where it could not be had.
     #[serde(deserialize_with = "null_is_nan::list")]
     pub covariance: Vec<f64>,
@@ -143,6 +151,36 @@ impl RingFit {
             + slope * t_s
             + amplitude * (-decay * t_s).exp() * (std::f64::consts::TAU * frequency * t_s + phase).cos()
     }
+}
+
+/// What a fitted ring stands on.
+#[derive(Debug, Clone, Copy, Default, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum FittedFloor {
+    /// Offset and slope.
+    #[default]
+    Straight,
+    /// Offset, slope and curvature.
+    Bent,
+    /// Offset and an exponential droop.
+    Drooping,
+}
+
+/// The fitted curve as the solver knows it; [`curve_v`](crate::fit::curve_v) draws it. Empty where a parameter set alone was stored.
+#[derive(Debug, Clone, Default, PartialEq, Serialize, Deserialize)]
+pub struct FittedCurve {
+    /// Unit of time in seconds.
+    pub span_s: f64,
+    /// What the ring stands on.
+    pub floor: FittedFloor,
+    /// Degree of the capacitance law of the circuit equation; `None` for a damped sinusoid.
+    pub law_degree: Option<usize>,
+    /// Whether the loss depends on amplitude.
+    pub core_loss: bool,
+    /// Nonlinear parameters: decay, angle, then those of the model.
+    pub nonlinear: Vec<f64>,
+    /// Linear parameters: amplitudes, then the floor's terms.
+    pub linear: Vec<f64>,
 }
 
 /// A typed reason to trust a value less or not at all.

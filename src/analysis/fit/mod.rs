@@ -1,16 +1,25 @@
-//! A ring found in samples: one damped sinusoid with offset and slope, its covariance, and the refusal of anything else.
+//! A ring found in samples: a damped sinusoid or the circuit equation, on a floor that may bend, with its covariance, and the refusal
+//! of anything else.
 
+mod attempt;
+mod circuit_equation;
 mod clipping;
-mod model;
+mod curves;
+mod damped_sinusoid;
+mod drawing;
+mod evidence;
+pub mod least_squares;
+mod moments;
 mod noise;
 mod report;
 mod ring;
 mod series;
-mod solve;
 mod start;
 mod verdict;
 mod window;
 
+pub use damped_sinusoid::{Base, DampedSinusoid, fit_damped_sinusoid};
+pub use drawing::curve_v;
 pub use ring::{combine, ring_of, weighted_mean};
 pub use window::find_ring_down;
 

@@ -1,34 +1,66 @@
 //! What is left after a fit: how strong the noise is where the ring is, and whether another ring stands in it.
 
 use super::{
-    model::{DampedSinusoid, Line},
+    curves::{Floor, Line, Ringing},
+    least_squares::{Solution, project, solve},
     series::Series,
-    solve::{Solution, project, residuals, solve},
     start::{spectrum, start_values},
 };
 use std::f64::consts::TAU;
 
-/// Variance of the residuals as the fit of a ring at `frequency` (cycles a span) feels it: the mean of their spectrum about the
-/// ring's frequency, where it stands out of the whole. Noise limited in bandwidth is stronger there than its total says.
-pub(super) fn variance_at(series: &Series, residual: &[f64], frequency: f64, parameters: usize) -> f64 {
+/// Noise as the fit of a ring feels it.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Noise {
+    /// Variance of white noise that would be as strong where the ring is.
+    pub(super) variance: f64,
+    /// Degrees of freedom that it is known with.
+    pub(super) freedom: f64,
+}
+
+/// Lowest and highest frequency of the narrowest band, over the ring's.
+const BAND: [f64; 2] = [0.3, 3.0];
+/// Growth of the band while it stays level, and the standard deviations that count as level.
+const GROWTH: f64 = 1.7;
+const LEVEL: f64 = 2.0;
+
+/// Noise in the residuals as the fit of a ring at `frequency` (cycles a span) feels it: the mean of their spectrum about the
+/// ring's frequency, over the widest band in which it is level. Noise limited in bandwidth is stronger there than its total says,
+/// and white noise is known best from all of it.
+pub(super) fn noise_at(series: &Series, residual: &[f64], frequency: f64, parameters: usize) -> Noise {
     let freedom = residual.len().saturating_sub(parameters).max(1) as f64;
-    let whole = residual.iter().map(|r| r * r).sum::<f64>() / freedom;
+    let whole = Noise { variance: residual.iter().map(|r| r * r).sum::<f64>() / freedom, freedom };
     if series.interval.is_none() {
         return whole;
     }
     let power = spectrum(residual, 1);
     let bins_a_cycle = 2.0 * (power.len() - 1) as f64 / series.rate();
-    let low = ((0.3 * frequency * bins_a_cycle) as usize).max(1);
-    let high = ((3.0 * frequency * bins_a_cycle) as usize).min(power.len() - 1);
+    let bin = |over: f64| ((over * frequency * bins_a_cycle) as usize).clamp(1, power.len() - 1);
     // Zero padding correlates the bins: as many are independent as there are cycles in the band.
-    let independent = high.saturating_sub(low) as f64 / bins_a_cycle * series.len() as f64 / series.rate();
-    if independent < 4.0 {
+    let independent = |bins: usize| bins as f64 / bins_a_cycle * series.len() as f64 / series.rate();
+    let [low, mut high] = BAND.map(bin);
+    let mut count = independent(high.saturating_sub(low));
+    if count < 5.0 {
         return whole;
     }
-    let mean = power[low..high].iter().sum::<f64>() / (high - low) as f64;
     // The four parameters of the ring have taken two bins' worth of noise out of the band.
-    let band = mean * independent / (independent - 2.0);
-    if band > whole * (1.0 + 1.5 / independent.sqrt()) { band } else { whole }
+    let mut sum = power[low..high].iter().sum::<f64>() * count / (high - low) as f64;
+    let taken = 2.0;
+    let mut over = BAND[1];
+    while high < power.len() - 1 {
+        over *= GROWTH;
+        let next = bin(over);
+        let more = independent(next - high);
+        if more < 1.0 {
+            if next == power.len() - 1 { break } else { continue }
+        }
+        let mean = power[high..next].iter().sum::<f64>() / (next - high) as f64;
+        let level = sum / (count - taken);
+        if (mean / level - 1.0).abs() > LEVEL * (1.0 / more + 1.0 / (count - taken)).sqrt() {
+            return Noise { variance: level, freedom: 2.0 * (count - taken) };
+        }
+        (sum, count, high) = (sum + mean * more, count + more, next);
+    }
+    whole
 }
 
 /// Another ring in the residuals of a fit.
@@ -48,11 +80,12 @@ pub(super) struct Remainder {
 pub(super) fn remainder(series: &Series, residual: &[f64]) -> Option<(Remainder, Vec<f64>)> {
     let left = series.with_volts(residual.to_vec());
     let start = start_values(&left)?;
-    let (_, flat) = project(&Line, &left, &[])?;
-    let Solution { nonlinear, linear, squares, .. } = solve(&DampedSinusoid, &left, &start, 30)?;
+    let (_, flat) = project(&Line, &left.times, &left.volts, &[])?;
+    let flat: f64 = flat.iter().map(|r| r * r).sum();
+    let found = solve(&Ringing(Floor::Straight), &left.times, &left.volts, &start, 30)?;
+    let Solution { nonlinear, linear, squares, residual: rest, .. } = found;
     let frequency = nonlinear[1] / TAU;
-    let rest = residuals(&DampedSinusoid, &left, &nonlinear, &linear);
-    let noise = variance_at(&left, &rest, frequency, 6);
+    let noise = noise_at(&left, &rest, frequency, 6).variance;
     let found = Remainder {
         amplitude_v: linear[0].hypot(linear[1]),
         frequency,

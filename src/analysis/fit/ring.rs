@@ -33,6 +33,7 @@ pub fn ring_of(fit: &RingFit) -> Ring {
             -damped * damped / (undamped * 2.0 * decay * decay),
             TAU * damped / (undamped * 2.0 * decay),
         ),
+        amplitude_v: fit.parameters[0],
     }
 }
 
@@ -45,6 +46,7 @@ pub fn combine(rings: &[Ring]) -> Option<Ring> {
         damped_frequency_hz: of(|ring| ring.damped_frequency_hz)?,
         decay_per_s: of(|ring| ring.decay_per_s)?,
         quality_factor: of(|ring| ring.quality_factor)?,
+        amplitude_v: rings.iter().map(|ring| ring.amplitude_v).sum::<f64>() / rings.len() as f64,
     })
 }
 

@@ -2,9 +2,9 @@
 //! block means.
 
 use super::{
-    model::{Curve, DampedSinusoid, Line},
+    curves::{Floor, Line, Ringing, swings},
+    least_squares::{project, solve},
     series::Series,
-    solve::{Solution, project, solve},
 };
 use realfft::{RealFftPlanner, num_complex::Complex64};
 use std::f64::consts::{PI, TAU};
@@ -19,19 +19,21 @@ const POINTS: f64 = 10.0;
 /// The damped sinusoid that explains most of the samples: decay and angular frequency a span.
 pub(super) fn start_values(series: &Series) -> Option<[f64; 2]> {
     let even = series.even();
-    let (_, flat) = project(&Line, &even, &[])?;
-    if flat <= 0.0 {
+    if flat(&even)? <= 0.0 {
         return None;
     }
     let mut tried: Vec<(f64, f64, [f64; 2])> = Vec::new();
     for frequency in spectral_peaks(&even) {
         let thin = even.thinned(frequency, POINTS);
-        let (_, flat) = project(&Line, &thin, &[])?;
+        let flat = flat(&thin)?;
         let best = QUALITIES
             .iter()
             .map(|quality| [PI * frequency / quality, TAU * frequency])
-            .filter(|start| DampedSinusoid.allows(start))
-            .filter_map(|start| Some((project(&DampedSinusoid, &thin, &start)?.1, start)))
+            .filter(|start| swings(start[0], start[1]))
+            .filter_map(|start| {
+                let (_, residual) = project(&Ringing(Floor::Straight), &thin.times, &thin.volts, &start)?;
+                Some((squares(&residual), start))
+            })
             .min_by(|a, b| a.0.total_cmp(&b.0));
         if let Some((squares, start)) = best {
             tried.push(((flat - squares) * thin.block as f64, frequency, start));
@@ -40,18 +42,25 @@ pub(super) fn start_values(series: &Series) -> Option<[f64; 2]> {
     tried.sort_by(|a, b| b.0.total_cmp(&a.0));
     let refined = tried.iter().take(2).filter_map(|&(_, frequency, start)| {
         let thin = even.thinned(frequency, POINTS);
-        let (_, flat) = project(&Line, &thin, &[])?;
-        let found: Solution = solve(&DampedSinusoid, &thin, &start, 30)?;
-        Some(((flat - found.squares) * thin.block as f64, [found.nonlinear[0], found.nonlinear[1]]))
+        let found = solve(&Ringing(Floor::Straight), &thin.times, &thin.volts, &start, 30)?;
+        Some(((flat(&thin)? - found.squares) * thin.block as f64, [found.nonlinear[0], found.nonlinear[1]]))
     });
     refined.max_by(|a, b| a.0.total_cmp(&b.0)).map(|(_, start)| start)
+}
+
+/// What a straight line leaves.
+fn flat(series: &Series) -> Option<f64> {
+    project(&Line, &series.times, &series.volts, &[]).map(|(_, residual)| squares(&residual))
+}
+
+fn squares(residual: &[f64]) -> f64 {
+    residual.iter().map(|r| r * r).sum()
 }
 
 /// Frequencies of the highest peaks of the spectrum, in cycles a span, highest first. No taper: a ring has its strength at the
 /// start, where a taper would take it away.
 fn spectral_peaks(series: &Series) -> Vec<f64> {
-    let Some((line, _)) = project(&Line, series, &[]) else { return Vec::new() };
-    let residual = super::solve::residuals(&Line, series, &[], &line);
+    let Some((_, residual)) = project(&Line, &series.times, &series.volts, &[]) else { return Vec::new() };
     let power = spectrum(&residual, 2);
     let bins_a_cycle = 2.0 * (power.len() - 1) as f64 / series.rate();
     let lowest = (0.8 * bins_a_cycle) as usize;

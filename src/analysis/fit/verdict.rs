@@ -1,17 +1,13 @@
 //! What counts as a valid single ring, and in which words anything else is refused.
 
 use super::{
-    Accepted, Refusal, RingRecord, Times, clipping,
-    model::{DampedSinusoid, Line, ShiftedSinusoid},
-    noise::{Remainder, remainder, variance_at},
-    report,
-    ring::ring_of,
-    series::Series,
-    solve::{Solution, project, residuals, solve},
-    start::start_values,
+    Accepted, Refusal, RingRecord, Times,
+    attempt::{Tried, plain_attempt},
+    clipping,
+    noise::{Remainder, remainder},
 };
-use crate::findings::{Doubt, DoubtName, Ring, RingFit, RingKind};
-use std::f64::consts::{PI, TAU};
+use crate::findings::{Doubt, DoubtName, RingFit, RingKind};
+use std::f64::consts::PI;
 
 /// Fewest samples that are looked at: fewer than two a parameter say nothing.
 pub(super) const FEWEST_SAMPLES: usize = 16;
@@ -39,39 +35,17 @@ const MOST_REMAINDERS: usize = 3;
 const NEAR_HARMONIC: f64 = 0.1;
 /// The same for a leakage ring, which begins at full swing, where the body diode may conduct on the first troughs.
 const NEAR_HARMONIC_LEAKAGE: f64 = 0.2;
-/// What the shift must explain, in variances of the noise, to be believed.
-const SHIFT_EVIDENCE: f64 = 30.0;
-/// Largest relative shift of the frequency, and largest second harmonic over the fundamental, that a capacitance law gives: with
-/// m = 1 at a swing of nine tenths of the bias they are some 9 % and 30 %.
-const LARGEST_SHIFT: f64 = 0.12;
-const LARGEST_HARMONIC: f64 = 0.35;
-/// A falling capacitance lowers the frequency of large swings and never without a second harmonic: by 0.2 (m = 1.5) to 1.7 (m = 0.3)
-/// times the square of the harmonic over the fundamental for a junction law, by more for a law with a knee.
-const SHIFT_PER_HARMONIC: f64 = 8.0;
-const SMALLEST_SHIFT: f64 = 5e-4;
-/// Points a period that the fit keeps: block means of a thirty-second of a period lose 0.2 % of what could be known.
-const POINTS: f64 = 32.0;
-
-/// A fit on the way to its verdict.
-pub(super) struct Tried<'a> {
-    record: RingRecord<'a>,
-    series: Series,
-    pub(super) fit: RingFit,
-    pub(super) ring: Ring,
-    /// The shift of the frequency with amplitude, where the record asks for it.
-    shift: Option<Shift>,
-    /// Variance of the (averaged) noise as the ring feels it.
-    pub(super) variance: f64,
-    residual: Vec<f64>,
-    pub(super) strength: f64,
-}
+/// Relative distance of a plain fit from the small-signal frequency that is worth telling.
+const SHIFT: f64 = 1e-3;
 
 pub(super) fn judge(record: &RingRecord<'_>, kind: RingKind) -> Result<Accepted, Refusal> {
     check_samples(record)?;
-    let tried = attempt(record, kind).ok_or_else(|| refuse(DoubtName::NoRing, NO_RING.to_owned()))?;
+    let tried = plain_attempt(record, kind).ok_or_else(|| refuse(DoubtName::NoRing, NO_RING.to_owned()))?;
+    let rejected = |tried: Tried<'_>, doubt| Refusal { doubt, rejected: Some(Box::new(tried.fit)) };
+    let tried = if tried.may_ring() { tried.described() } else { tried };
     match plausible(&tried).and_then(|()| single(&tried)) {
         Ok(doubts) => Ok(Accepted { fit: RingFit { accepted: true, ..tried.fit }, ring: tried.ring, doubts }),
-        Err(doubt) => Err(Refusal { doubt, rejected: Some(Box::new(tried.fit)) }),
+        Err(doubt) => Err(rejected(tried, doubt)),
     }
 }
 
@@ -101,56 +75,6 @@ fn check_samples(record: &RingRecord<'_>) -> Result<(), Refusal> {
         return Err(refuse(DoubtName::NoRing, sentence));
     }
     Ok(())
-}
-
-/// The best fit of one ring, with the shift of its frequency where the samples ask for it. `None` where none can be had.
-pub(super) fn attempt<'a>(record: &RingRecord<'a>, kind: RingKind) -> Option<Tried<'a>> {
-    let whole = Series::of(record);
-    let start = start_values(&whole)?;
-    let series = whole.thinned(start[1] / TAU, POINTS);
-    let solution = solve(&DampedSinusoid, &series, &start, 60)?;
-    let (_, flat) = project(&Line, &series, &[])?;
-    let frequency = solution.nonlinear[1] / TAU;
-    let mut residual = residuals(&DampedSinusoid, &series, &solution.nonlinear, &solution.linear);
-    let mut variance = variance_at(&series, &residual, frequency, 6);
-    let mut fit = report::ring_fit(record, kind, &series, &solution, variance);
-    fit.residual_v = report::residual_v(record, &fit);
-    let mut ring = ring_of(&fit);
-    let mut squares = solution.squares;
-    let shift = shifted(&series, &solution);
-    if let Some(found) = &shift {
-        (variance, squares) = (found.variance, found.solution.squares);
-        residual.clone_from(&found.residual);
-        ring = ring_of(&report::ring_fit(record, kind, &series, &found.solution, variance));
-    }
-    let strength = (flat - squares) / variance.max(f64::MIN_POSITIVE);
-    Some(Tried { record: *record, series, fit, ring, shift, variance, residual, strength })
-}
-
-/// The fit with a frequency that moves with the amplitude.
-struct Shift {
-    solution: Solution,
-    pub(super) variance: f64,
-    residual: Vec<f64>,
-    /// Relative shift of the frequency at the start of the window.
-    relative: f64,
-}
-
-/// Fits the shift, and keeps it only on evidence.
-fn shifted(series: &Series, plain: &Solution) -> Option<Shift> {
-    let start = [plain.nonlinear[0], plain.nonlinear[1], 0.0];
-    let solution = solve(&ShiftedSinusoid, series, &start, 40)?;
-    let [decay, angular, chirp] = *solution.nonlinear.as_slice() else { return None };
-    let residual = residuals(&ShiftedSinusoid, series, &solution.nonlinear, &solution.linear);
-    let variance = variance_at(series, &residual, angular / TAU, 9);
-    let evidence = (plain.squares - solution.squares) / variance.max(f64::MIN_POSITIVE);
-    let first = solution.linear[0].hypot(solution.linear[1]);
-    let second = solution.linear[4].hypot(solution.linear[5]);
-    let relative = chirp / angular;
-    let harmonic = second / first;
-    let shifted = -relative > SMALLEST_SHIFT && -relative < LARGEST_SHIFT.min(SHIFT_PER_HARMONIC * harmonic * harmonic);
-    let sane = decay > 0.0 && shifted && harmonic < LARGEST_HARMONIC;
-    (sane && evidence > SHIFT_EVIDENCE).then_some(Shift { solution, variance, residual, relative })
 }
 
 /// Whether what was fitted can be a ring at all.
@@ -211,7 +135,8 @@ pub(super) fn plausible(tried: &Tried<'_>) -> Result<(), Doubt> {
 /// Whether one ring describes the record: what is left after the fit may hold no other. What is left near the ring's own
 /// frequency or its harmonics and dies sooner is the ring's own distortion; what swings less than twice is a drift.
 fn single(tried: &Tried<'_>) -> Result<Vec<Doubt>, Doubt> {
-    let mut doubts: Vec<Doubt> = tried.shift.iter().filter(|s| s.relative.abs() > 1e-3).map(shift_doubt).collect();
+    let mut doubts: Vec<Doubt> =
+        tried.shift.iter().filter(|shift| shift.abs() > SHIFT).map(|&shift| shift_doubt(shift)).collect();
     let own = tried.ring.damped_frequency_hz.value * tried.series.span_s;
     let own_decay = tried.ring.decay_per_s.value * tried.series.span_s;
     let mut residual = tried.residual.clone();
@@ -268,11 +193,11 @@ fn misfit(tried: &Tried<'_>) -> Option<Doubt> {
     })
 }
 
-fn shift_doubt(shift: &Shift) -> Doubt {
+fn shift_doubt(shift: f64) -> Doubt {
     let sentence = format!(
-        "the frequency at the start of the window is {:.1} % off the one of small swings: the node capacitance depends on voltage, and \
-         the small-signal value is given",
-        100.0 * shift.relative
+        "the ring follows a voltage-dependent capacitance: a plain damped sinusoid would lie {:.2} % off the frequency of small \
+         swings, which is the one given",
+        100.0 * shift
     );
     doubt(DoubtName::AmplitudeDependent, sentence)
 }

@@ -1,6 +1,6 @@
 //! Where a free ring-down begins and ends in a record that may start before the event and hold the next one.
 
-use super::{RingRecord, Times, verdict};
+use super::{RingRecord, Times, attempt::plain_attempt, verdict};
 use crate::findings::RingKind;
 use std::ops::Range;
 
@@ -66,7 +66,7 @@ fn search(record: &RingRecord<'_>) -> Option<Range<usize>> {
 /// Where the swings before the window begin: as far back as they still follow the ring roughly. Swings that belong to the ring but
 /// do not fit it are not left out to make it look better.
 fn swinging_before(record: &RingRecord<'_>, window: &Range<usize>) -> usize {
-    let Some(tried) = verdict::attempt(&record.part(window.clone()), RingKind::Relaxation) else { return window.start };
+    let Some(tried) = plain_attempt(&record.part(window.clone()), RingKind::Relaxation) else { return window.start };
     let time = |n: usize| match record.times_s {
         Times::Even { start_s, interval_s } => start_s + n as f64 * interval_s,
         Times::Uneven(times) => times[n],
@@ -92,7 +92,7 @@ fn uncertainty(record: &RingRecord<'_>, window: Range<usize>, floor: f64) -> Opt
     if window.len() < verdict::FEWEST_SAMPLES {
         return None;
     }
-    let tried = verdict::attempt(&record.part(window), RingKind::Relaxation)?;
+    let tried = plain_attempt(&record.part(window), RingKind::Relaxation)?;
     let rings = verdict::plausible(&tried).is_ok();
     let widened = (1.0 + floor * floor / tried.variance).sqrt();
     rings.then(|| tried.ring.damped_frequency_hz.relative_uncertainty() * widened)

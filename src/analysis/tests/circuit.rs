@@ -25,6 +25,7 @@ fn ring(frequency_hz: f64, uncertainty: f64, quality: f64) -> Ring {
             covariance[2 * 6 + 2] = uncertainty * uncertainty;
             covariance
         },
+        curve: Default::default(),
         residual_v: 0.0,
         stopped: String::new(),
         accepted: true,
@@ -87,6 +88,7 @@ fn quality_factor_agrees_with_the_logarithmic_decrement() {
             end_s: 1e-5,
             parameters: [1.0, -ratio.ln() * 2.0 * frequency, frequency, 0.0, 0.0, 0.0],
             covariance: vec![0.0; 36],
+            curve: Default::default(),
             residual_v: 0.0,
             stopped: String::new(),
             accepted: true,

@@ -65,56 +65,6 @@ fn errors_are_at_the_bound_and_intervals_hold_the_truth() {
     }
 }
 
-/// Junction-law capacitance, C = C0 / (1 + v/Vj)^m, solved as the circuit equation: C(v) v' = i, L i' = Vb - v - R i.
-fn junction_ring(law: f64, bias: f64, swing: f64, seed: u64) -> (Made, f64, f64) {
-    let (henry, at_bias) = (1e-3, 80e-12);
-    let capacitance = |v: f64| at_bias * ((1.0 + bias / 0.7) / (1.0 + v.max(-0.3) / 0.7)).powf(law);
-    let natural = 1.0 / (henry * at_bias).sqrt();
-    let (quality, points, inner) = (20.0, 200usize, 10usize);
-    let resistance = henry * natural / quality;
-    let interval_s = TAU / natural / points as f64;
-    let step = interval_s / inner as f64;
-    let slope = |[v, i]: [f64; 2]| [i / capacitance(v), (bias - v - resistance * i) / henry];
-    let add = |[v, i]: [f64; 2], [a, b]: [f64; 2], h: f64| [v + h * a, i + h * b];
-    let mut state = [bias + swing, 0.0];
-    let mut volts = Vec::new();
-    for n in 0..12 * points * inner {
-        if n % inner == 0 {
-            volts.push(state[0]);
-        }
-        let a = slope(state);
-        let b = slope(add(state, a, step / 2.0));
-        let c = slope(add(state, b, step / 2.0));
-        let d = slope(add(state, c, step));
-        state = [0, 1].map(|k| state[k] + step / 6.0 * (a[k] + 2.0 * b[k] + 2.0 * c[k] + d[k]));
-    }
-    let frequency_hz = natural / TAU;
-    let mut made = Made {
-        interval_s,
-        volts,
-        step_v: None,
-        frequency_hz,
-        decay_per_s: resistance / 2.0 / henry,
-        what: String::new(),
-    };
-    Maker::new(seed).add_noise(&mut made, swing / 200.0, None);
-    (made, henry, at_bias)
-}
-
-#[test]
-fn small_signal_capacitance_comes_out_of_a_large_swing() {
-    for (law, swing) in [(0.3, 100.0), (0.5, 60.0), (0.5, 100.0), (0.7, 100.0), (1.0, 80.0), (1.5, 90.0)] {
-        let (made, henry, at_bias) = junction_ring(law, 150.0, swing, 7);
-        let accepted = fit(&made);
-        let capacitance = |hz: f64| 1.0 / ((TAU * hz).powi(2) * henry);
-        let small = capacitance(accepted.ring.frequency_hz.value) / at_bias - 1.0;
-        let plain = capacitance(ringstep_analysis::fit::ring_of(&accepted.fit).frequency_hz.value) / at_bias - 1.0;
-        println!("m {law}, swing {swing} V: C off by {:.3} %, by a plain fit {:.3} %", 100.0 * small, 100.0 * plain);
-        assert!(small.abs() < 0.01, "{small}");
-        assert!(accepted.doubts.iter().any(|doubt| doubt.name == DoubtName::AmplitudeDependent));
-    }
-}
-
 /// SciPy's Levenberg-Marquardt on the same samples finds the same minimum: parameters within a fraction of their uncertainty.
 #[test]
 fn a_general_least_squares_library_finds_the_same_minimum() {

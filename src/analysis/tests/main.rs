@@ -13,4 +13,5 @@ mod generate;
 mod quantity;
 mod recording_flyback;
 mod recordings_rlc;
+mod small_signal;
 mod waveform;

@@ -1,0 +1,199 @@
+//! Which curve the samples ask for: one damped sinusoid where that does, a floor that bends or droops, the circuit equation where the
+//! capacitance or the loss depends on amplitude. More is taken only on evidence.
+
+use super::{
+    circuit_equation::{CircuitEquation, MOST_DEGREES},
+    curves::{Floor, Ringing},
+    least_squares::{Curve, Solution, promised_gain, solve},
+    noise::{Noise, noise_at},
+    series::Series,
+};
+use crate::findings::RingKind;
+use nalgebra::DMatrix;
+use std::f64::consts::TAU;
+
+/// Any of the curves.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) enum Model {
+    /// One damped sinusoid.
+    Ringing(Floor),
+    /// The circuit equation.
+    Circuit(CircuitEquation),
+}
+
+impl Model {
+    /// What the ring stands on.
+    pub(super) fn floor(self) -> Floor {
+        match self {
+            Self::Ringing(floor) => floor,
+            Self::Circuit(equation) => equation.floor,
+        }
+    }
+}
+
+impl Curve for Model {
+    fn columns(&self, nonlinear: &[f64], times: &[f64]) -> DMatrix<f64> {
+        match self {
+            Self::Ringing(floor) => Ringing(*floor).columns(nonlinear, times),
+            Self::Circuit(equation) => equation.columns(nonlinear, times),
+        }
+    }
+
+    fn derivatives(&self, nonlinear: &[f64], linear: &[f64], times: &[f64]) -> DMatrix<f64> {
+        match self {
+            Self::Ringing(floor) => Ringing(*floor).derivatives(nonlinear, linear, times),
+            Self::Circuit(equation) => equation.derivatives(nonlinear, linear, times),
+        }
+    }
+
+    fn allows(&self, nonlinear: &[f64]) -> bool {
+        match self {
+            Self::Ringing(floor) => Ringing(*floor).allows(nonlinear),
+            Self::Circuit(equation) => equation.allows(nonlinear),
+        }
+    }
+}
+
+/// A model with its solution and the noise beside it.
+#[derive(Debug, Clone)]
+pub(super) struct Described {
+    pub(super) model: Model,
+    pub(super) solution: Solution,
+    pub(super) noise: Noise,
+}
+
+/// What a floor's bend, core loss and a law of one degree more must explain, in variances of the noise, to be believed: once in a
+/// thousand rings without them, noise does. Being too easily convinced costs a little certainty, being too hard leaves a bias.
+const MORE: f64 = 11.0;
+/// The same for two degrees of a law at once where there was none.
+const CIRCUIT: f64 = 16.0;
+/// The same for one more degree of the law, once there is one.
+const DEGREE: f64 = 6.0;
+/// Share of its threshold that a step must promise by its slope alone to be worth a fit.
+const SCREEN: f64 = 0.3;
+/// Share of its fall by which a law may rise elsewhere: a polynomial follows a knee only so far.
+const RISE: f64 = 0.1;
+/// Ring periods from which a leakage ring's floor is bent always: the plateau droops, and a bend costs under 4 % there.
+const BENT_PERIODS: f64 = 6.0;
+/// Iterations of one fit.
+const ITERATIONS: usize = 60;
+
+/// The floor that a ring of that kind is given before anything is known.
+pub(super) fn first_floor(kind: RingKind, periods: f64) -> Floor {
+    if kind == RingKind::Leakage && periods >= BENT_PERIODS { Floor::Bent } else { Floor::Straight }
+}
+
+impl Described {
+    /// Fits that model.
+    pub(super) fn by(model: Model, series: &Series, start: &[f64]) -> Option<Self> {
+        let solution = solve(&model, &series.times, &series.volts, start, ITERATIONS)?;
+        let frequency = solution.nonlinear[1] / TAU;
+        let parameters = solution.inverse.nrows();
+        let noise = noise_at(series, &solution.residual, frequency, parameters);
+        Some(Self { model, solution, noise })
+    }
+
+    /// What this explains beyond another, in variances of the noise.
+    fn beyond(&self, other: &Self) -> f64 {
+        (other.solution.squares - self.solution.squares) / self.noise.variance.max(f64::MIN_POSITIVE)
+    }
+
+    /// Whether the law is that of a junction: it falls with voltage wherever the ring swings, but for a small share of its range.
+    fn sane(&self) -> bool {
+        let Model::Circuit(equation) = self.model else { return true };
+        let laws: Vec<f64> =
+            (-9..=9).map(|n| equation.relative_capacitance(&self.solution.nonlinear, 0.1 * f64::from(n))).collect();
+        let rises: f64 = laws.windows(2).map(|pair| (pair[1] - pair[0]).max(0.0)).sum();
+        let falls: f64 = laws.windows(2).map(|pair| (pair[0] - pair[1]).max(0.0)).sum();
+        self.solution.nonlinear[0] > 0.0 && rises <= RISE * falls
+    }
+
+    /// The nonlinear parameters of a model that has more, to begin with.
+    fn towards(&self, model: Model) -> Vec<f64> {
+        let own = &self.solution.nonlinear;
+        let own_rate = own.last().copied().filter(|_| self.model.floor().rates() > 0);
+        let mut start = match (self.model, model) {
+            (_, Model::Ringing(_)) => own[..2].to_vec(),
+            (Model::Ringing(_), Model::Circuit(to)) => {
+                let phase = (-self.solution.linear[1]).atan2(self.solution.linear[0]);
+                let mut start = vec![own[0], own[1].hypot(own[0]), phase];
+                start.resize(to.law() + to.degree, 0.0);
+                start
+            }
+            (Model::Circuit(from), Model::Circuit(to)) => {
+                let mut start = own[..3].to_vec();
+                if to.core_loss {
+                    start.push(if from.core_loss { own[3] } else { 0.0 });
+                }
+                start.extend_from_slice(&own[from.law()..from.law() + from.degree]);
+                start.resize(to.law() + to.degree, 0.0);
+                start
+            }
+        };
+        start.extend((0..model.floor().rates()).map(|_| own_rate.unwrap_or(1.0)));
+        start
+    }
+}
+
+/// What the samples ask for, beginning at a damped sinusoid that has been fitted: of all models that have a little more, the one that
+/// promises to explain most, until none explains enough. A law is then given one degree more than that, so that what is left out of
+/// it shows in the uncertainty and not as an error.
+pub(super) fn described(plain: Described, series: &Series) -> Described {
+    let mut best = plain;
+    while let Some(found) = better(&best, series) {
+        best = found;
+    }
+    match best.model {
+        Model::Circuit(equation) if (1..MOST_DEGREES).contains(&equation.degree) => {
+            let model = Model::Circuit(CircuitEquation { degree: equation.degree + 1, ..equation });
+            Described::by(model, series, &best.towards(model)).filter(Described::sane).unwrap_or(best)
+        }
+        _ => best,
+    }
+}
+
+fn better(best: &Described, series: &Series) -> Option<Described> {
+    let variance = best.noise.variance.max(f64::MIN_POSITIVE);
+    let mut promising: Vec<(f64, f64, Model)> = larger(best)
+        .into_iter()
+        .filter_map(|(model, threshold)| {
+            let (squares, gain) = promised_gain(&model, &series.times, &series.volts, &best.towards(model))?;
+            let gain = gain - (squares - best.solution.squares);
+            (gain > SCREEN * threshold * variance).then_some((gain, threshold, model))
+        })
+        .collect();
+    promising.sort_by(|a, b| b.0.total_cmp(&a.0));
+    promising.into_iter().find_map(|(_, threshold, model)| {
+        let found = Described::by(model, series, &best.towards(model))?;
+        (found.beyond(best) > threshold && found.sane()).then_some(found)
+    })
+}
+
+/// The models that have a little more, each with what it must explain.
+fn larger(best: &Described) -> Vec<(Model, f64)> {
+    let (model, about) = (best.model, best.solution.nonlinear[1]);
+    let mut larger = Vec::new();
+    let equation = match model {
+        Model::Ringing(floor) => CircuitEquation { degree: 0, core_loss: false, floor, about },
+        Model::Circuit(equation) => equation,
+    };
+    let with_floor = |floor| match model {
+        Model::Ringing(_) => Model::Ringing(floor),
+        Model::Circuit(equation) => Model::Circuit(CircuitEquation { floor, ..equation }),
+    };
+    match equation.floor {
+        Floor::Straight => larger.push((with_floor(Floor::Bent), MORE)),
+        Floor::Bent => larger.push((with_floor(Floor::Drooping), MORE)),
+        Floor::Drooping => {}
+    }
+    if !equation.core_loss {
+        larger.push((Model::Circuit(CircuitEquation { core_loss: true, ..equation }), MORE));
+    }
+    // Where one degree more tells nothing, the one after it may.
+    let steps = if equation.degree == 0 { [(1, MORE), (2, CIRCUIT)] } else { [(1, DEGREE), (2, 2.0 * DEGREE)] };
+    for (more, threshold) in steps.into_iter().filter(|(more, _)| equation.degree + more <= MOST_DEGREES) {
+        let degree = equation.degree + more;
+        larger.push((Model::Circuit(CircuitEquation { degree, ..equation }), threshold));
+    }
+    larger
+}
