@@ -2,9 +2,10 @@
 
 use super::{BudgetError, data::Budget};
 use crate::quantity::Measured;
+use serde::{Deserialize, Serialize};
 
 /// One result against another.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 pub struct Comparison {
     /// First over second.
     pub ratio: Measured,
@@ -18,7 +19,7 @@ impl Budget {
     /// Compares this result with another of the same unit. An input that both budgets mark as common under one name is one
     /// and the same error in both: what it does to the one it takes from the other (JCGM 100:2008, 5.2.2 and F.1.2.3, with
     /// a correlation of 1). A gain or a nominal inductance so cancels in the ratio, an offset in the difference;
-    /// whatever does not cancel stays. All other inputs are independent.
+    /// whatever does not cancel stays. All other inputs are independent, also of the common ones.
     ///
     /// # Errors
     /// Different units, or a ratio to zero.

@@ -120,7 +120,8 @@ pub struct Component {
     /// The input.
     #[serde(flatten)]
     pub input: Input,
-    /// Partial derivative of the result with respect to the input, in the unit of the result over that of the input.
+    /// Partial derivative of the result with respect to the input, in the unit of the result over that of the input;
+    /// zero, because nothing tells how far to look, for an input that is exactly zero.
     pub sensitivity: f64,
     /// Magnitude of sensitivity times standard uncertainty, in the unit of the result.
     pub contribution: f64,

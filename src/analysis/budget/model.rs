@@ -99,13 +99,13 @@ impl<F: Fn(&[f64]) -> f64> Model<F> {
         if value.is_finite() { Ok(value) } else { Err(error()) }
     }
 
-    /// The model with one input moved away from its estimate.
+    /// The model with inputs moved away from their estimates.
     pub(super) fn moved(&self, values: &[f64], moves: &[(usize, f64)]) -> Result<f64, BudgetError> {
         let mut at = values.to_vec();
         moves.iter().for_each(|&(n, step)| at[n] += step);
         self.evaluate(&at, || {
             let names: Vec<_> = moves.iter().map(|&(n, _)| format!("`{}`", self.inputs[n].name)).collect();
-            format!("one standard uncertainty or less away in {}", names.join(" and "))
+            format!("near the best estimate of {}", names.join(" and "))
         })
     }
 

@@ -17,6 +17,9 @@ const FEWEST_TRIALS: usize = 1000;
 /// Coverage probability of the intervals.
 const COVERAGE: f64 = 0.95;
 
+/// Ends of an interval lie within so many of their standard uncertainties from chance alone.
+const CHANCE: f64 = 3.0;
+
 /// What the trials gave, in the unit of the result.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct MonteCarlo {
@@ -24,7 +27,8 @@ pub struct MonteCarlo {
     pub trials: usize,
     /// Mean of the trials.
     pub mean: f64,
-    /// Standard deviation of the trials.
+    /// Standard deviation of the trials. It grows with their number, and says nothing, where an input of two or fewer
+    /// degrees of freedom dominates, whose distribution has no variance (JCGM 101:2008, 6.4.9.4); the intervals hold.
     pub standard_uncertainty: f64,
     /// Probabilistically symmetric 95 % interval (JCGM 101:2008, 7.7.2).
     pub symmetric: [f64; 2],
@@ -36,11 +40,12 @@ pub struct MonteCarlo {
 
 impl MonteCarlo {
     /// Whether the ends of the other interval lie within the numerical tolerance of the symmetric one
-    /// (JCGM 101:2008, 8.1), beyond twice what too few trials may have moved them.
+    /// (JCGM 101:2008, 8.1), beyond what the number of trials may have moved them. Two digits can be told apart with about
+    /// a million trials; fewer call a model nonlinear only where it is grossly so.
     pub fn confirms(&self, budget: &Budget, significant_digits: u32) -> bool {
         let tolerance = numerical_tolerance(self.standard_uncertainty, significant_digits);
         let ends = [budget.low, budget.high].into_iter().zip(self.symmetric).zip(self.end_uncertainty);
-        ends.into_iter().all(|((theirs, ours), spread)| (theirs - ours).abs() <= tolerance + 2.0 * spread)
+        ends.into_iter().all(|((theirs, ours), spread)| (theirs - ours).abs() <= tolerance + CHANCE * spread)
     }
 
     /// Whether the first-order law is not enough: its interval differs in the second significant digit of the standard

@@ -41,7 +41,10 @@ impl Budget {
     fn sensitivity_text(&self, component: &Component) -> String {
         let below = component.input.unit.as_str();
         let above = if below == self.unit { "" } else { self.unit.as_str() };
-        let [text, _] = pair(significant(component.sensitivity), 0.0, above);
+        let text = match unit_of(above) {
+            Some(unit) if unit != Unit::One => pair(significant(component.sensitivity), 0.0, above)[0].clone(),
+            _ => format!("{} {above}", plain(component.sensitivity)).trim_end().to_owned(),
+        };
         match below {
             "" | "%" => text,
             _ if below == self.unit => text,
@@ -53,7 +56,7 @@ impl Budget {
 
 /// Value and uncertainty as text with the same prefix and the decimals that the uncertainty asks for.
 fn pair(value: f64, uncertainty: f64, unit: &str) -> [String; 2] {
-    let known = KNOWN.into_iter().find(|known| known.to_string() == unit);
+    let known = unit_of(unit);
     let text = Measured { value, standard_uncertainty: uncertainty }
         .text_with_standard_uncertainty(known.unwrap_or(Unit::One));
     let (value, uncertainty) = text.split_once(" +- ").unwrap_or((&text, "0"));
@@ -76,6 +79,16 @@ const KNOWN: [Unit; 12] = [
     Unit::Percent,
     Unit::One,
 ];
+
+fn unit_of(text: &str) -> Option<Unit> {
+    KNOWN.into_iter().find(|known| known.to_string() == text)
+}
+
+/// Three significant digits of a number that takes no prefix, with an exponent where zeros would hide it.
+fn plain(value: f64) -> String {
+    let written_out = value == 0.0 || (1e-3..1e6).contains(&value.abs());
+    if written_out { significant(value).to_string() } else { format!("{value:.2e}") }
+}
 
 /// Rounded to three significant digits.
 fn significant(value: f64) -> f64 {

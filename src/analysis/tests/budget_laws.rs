@@ -1,6 +1,9 @@
 //! What holds of every budget: scaling, units, shares, coverage, draws, comparison, and its life as JSON and as a table.
 
 use proptest::prelude::*;
+use rand::{RngExt, SeedableRng};
+use rand_chacha::ChaCha8Rng;
+use rand_distr::StandardNormal;
 use ringstep_analysis::{
     budget::{Budget, BudgetError, COLUMNS, Input, Model, coverage_factor_95, numerical_tolerance},
     quantity::{COVERAGE_95, Measured, Unit},
@@ -70,6 +73,20 @@ proptest! {
     fn an_interval_of_student_t_is_wider_than_a_normal_one(few in 1.0..1e5f64, more in 0.1..1e4f64) {
         prop_assert!(coverage_factor_95(few) > coverage_factor_95(few + more));
         prop_assert!(coverage_factor_95(few + more) > COVERAGE_95);
+    }
+
+    /// Exact variance of a square and of a product of normal quantities (Goodman, J. Am. Stat. Assoc. 55, 1960 [M]), and of a
+    /// cube but for its last term, 15 u^6.
+    #[test]
+    fn second_order_is_exact_where_the_series_ends(m in prop::array::uniform2(-3.0..3.0f64), u in prop::array::uniform2(0.01..2.0f64)) {
+        let second = |law: fn(&[f64]) -> f64| {
+            let inputs = (0..2).map(|n| Input::normal(&format!("x{n}"), "", known(m[n], u[n]))).collect();
+            Model::new("result", "", inputs, law).second_order().unwrap().standard_uncertainty.powi(2)
+        };
+        let ([a, b], [s, t]) = (m.map(|m| m * m), u.map(|u| u * u));
+        prop_assert!(close(second(|x| x[0] * x[0]), 4.0 * a * s + 2.0 * s * s, 1e-6));
+        prop_assert!(close(second(|x| x[0] * x[1]), a * t + b * s + s * t, 1e-6));
+        prop_assert!(close(second(|x| x[0].powi(3)), 9.0 * a * a * s + 36.0 * a * s * s, 1e-6));
     }
 
     #[test]
@@ -157,7 +174,8 @@ fn few_trials_do_not_call_a_linear_model_nonlinear() {
     let model = Model::new("sum", "", inputs, |x: &[f64]| x.iter().sum());
     let first = model.first_order().unwrap();
     let called = (0..200).filter(|seed| model.monte_carlo(2000, *seed).unwrap().nonlinear(&first)).count();
-    assert!(called < 30, "{called} of 200");
+    println!("{called} of 200 called nonlinear");
+    assert!(called < 6, "{called} of 200");
     assert_eq!(model.monte_carlo(2000, 1).unwrap(), model.monte_carlo(2000, 1).unwrap());
 }
 
@@ -213,6 +231,32 @@ fn json_keeps_infinite_degrees_of_freedom() {
     assert_eq!(serde_json::from_str::<Budget>(&text).unwrap(), budget);
     let finite = capacitance([0.01; 3], 1.0, 1.0);
     assert_eq!(serde_json::from_str::<Budget>(&serde_json::to_string(&finite).unwrap()).unwrap(), finite);
+}
+
+/// The definition of a 95 % interval: repeated with fresh observations and a fresh correction each time, it holds the truth as
+/// often.
+#[test]
+fn intervals_of_few_observations_hold_the_truth() {
+    let mut random = ChaCha8Rng::seed_from_u64(17);
+    let (repeats, truth) = (20_000, 3.0);
+    for correction in [0.0, 0.2, 1.0] {
+        let mut inside = 0;
+        for _ in 0..repeats {
+            let offset = correction * random.sample::<f64, _>(StandardNormal);
+            let observations = [(); 4].map(|()| truth + offset + random.sample::<f64, _>(StandardNormal));
+            let inputs = vec![
+                Input::mean_of("repeatability", "V", &observations),
+                Input::normal("offset", "V", known(0.0, correction)),
+            ];
+            let budget = Model::new("voltage", "V", inputs, |x: &[f64]| x[0] - x[1]).first_order().unwrap();
+            inside += u32::from((budget.low..budget.high).contains(&truth));
+        }
+        let coverage = f64::from(inside) / f64::from(repeats);
+        println!("correction {correction} V: {:.2} % covered", 100.0 * coverage);
+        // Welch-Satterthwaite is known to be a per cent or so cautious or bold in between; exact where one input is alone.
+        let slack = if correction == 0.0 { 0.005 } else { 0.015 };
+        assert!((coverage - 0.95).abs() < slack, "{correction}: {coverage}");
+    }
 }
 
 #[test]
