@@ -5,7 +5,7 @@ use crate::{
     need::need_python,
 };
 use ringstep_analysis::{
-    findings::{DoubtName, RingKind},
+    findings::RingKind,
     fit::{Accepted, fit_ring},
 };
 use std::{f64::consts::TAU, process::Command};

@@ -5,6 +5,8 @@
 mod need;
 
 mod acceptance;
+mod budget;
+mod budget_laws;
 mod circuit;
 mod cycles;
 mod drain;
