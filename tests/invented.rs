@@ -180,6 +180,10 @@ fn values(line_v: f64) -> PointValues {
         bulk_voltage_v: Some(measured(bulk_v, 0.002)),
         peak_drain_voltage_v: Some(measured(bulk_v + CLAMP_V, 0.01)),
         turn_on_rate_hz: Some(measured(21.3e3, 0.01)),
+        relaxation_amplitude_v: Some(96.0),
+        leakage_amplitude_v: Some(41.0),
+        budgets: Vec::new(),
+        capacitance_parts: Vec::new(),
     }
 }
 

@@ -1,7 +1,7 @@
 //! What happens in a run, as plain data. The journal is these events, one JSON line each.
 
 use crate::instrument::{Identity, LoadReading, RawWaveform, SourceReading};
-use ringstep_analysis::{findings::Findings, quantity::Measured};
+use ringstep_analysis::{budget::Budget, circuit::CapacitancePart, findings::Findings, quantity::Measured};
 use serde::{Deserialize, Serialize};
 
 /// One event of a run. Newer versions add variants and optional fields; they never change the meaning of old ones.
@@ -202,4 +202,16 @@ pub struct PointValues {
     pub peak_drain_voltage_v: Option<Measured>,
     /// Turn-on rate in the survey at the measuring load.
     pub turn_on_rate_hz: Option<Measured>,
+    /// Amplitude in volts at which the quality factor of the relaxation ring holds: at the start of its window.
+    #[serde(default)]
+    pub relaxation_amplitude_v: Option<f64>,
+    /// The same of the leakage ring.
+    #[serde(default)]
+    pub leakage_amplitude_v: Option<f64>,
+    /// Uncertainty budget of every circuit value and voltage.
+    #[serde(default)]
+    pub budgets: Vec<Budget>,
+    /// The node capacitance taken apart, as far as the board file states its parts.
+    #[serde(default)]
+    pub capacitance_parts: Vec<CapacitancePart>,
 }
