@@ -105,6 +105,7 @@ fn ring(frequency_hz: f64, decay: f64) -> Ring {
         decay_per_s: measured(decay, 0.01),
         quality_factor: measured(TAU * frequency_hz / (2.0 * decay), 0.01),
         amplitude_v: 100.0,
+        alternative_hz: None,
     }
 }
 

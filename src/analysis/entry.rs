@@ -227,6 +227,7 @@ fn circuit_values(relaxation: &[Ring], leakage: &[Ring], facts: &BoardFacts, fin
         leakage: RingObservation::of(leakage),
         bulk_voltage_v: findings.bulk_voltage_v,
         reflected_voltage_v: findings.reflected_voltage_v,
+        release_v: findings.release_v(),
     };
     let values = CircuitValues::of(&observed, facts);
     findings.node_capacitance_f = values.node_capacitance.as_ref().map(Budget::measured);

@@ -81,6 +81,13 @@ pub struct Findings {
     pub doubts: Vec<Doubt>,
 }
 
+impl Findings {
+    /// Highest drain voltage above the bulk voltage: where a clamp limits it, the clamp's level.
+    pub fn release_v(&self) -> Option<f64> {
+        Some(self.peak_drain_voltage_v?.value - self.bulk_voltage_v?.value)
+    }
+}
+
 /// Parameters of a ring.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
 pub struct Ring {
@@ -96,6 +103,10 @@ pub struct Ring {
     /// swings.
     #[serde(default)]
     pub amplitude_v: f64,
+    /// Undamped frequency by a model with a free capacitance law, where the ring's own has none: many rings together may tell what
+    /// one cannot.
+    #[serde(default)]
+    pub alternative_hz: Option<Measured>,
 }
 
 /// One switching cycle: from a turn-on to the next.

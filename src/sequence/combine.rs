@@ -20,12 +20,14 @@ pub(super) struct Captured<'a> {
 /// Puts the captures of one point together.
 pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValues {
     let relaxation = rings(captured.relaxation, |findings| findings.relaxation_ring);
-    let (leakage, leakage_captures) = leakage_rings(captured).unwrap_or_default();
+    let (leakage, leakage_set) = leakage_rings(captured).unwrap_or_default();
+    let releases: Vec<f64> = leakage_set.iter().filter_map(|(_, findings)| findings.release_v()).collect();
     let observed = Observed {
         relaxation: RingObservation::of(&relaxation),
         leakage: RingObservation::of(&leakage),
         bulk_voltage_v: mean(captured.relaxation, |findings| findings.bulk_voltage_v),
         reflected_voltage_v: mean(captured.relaxation, |findings| findings.reflected_voltage_v),
+        release_v: (!releases.is_empty()).then(|| releases.iter().sum::<f64>() / releases.len() as f64),
     };
     let values = CircuitValues::of(&observed, facts);
     let (relaxation, leakage) = (fit::combine(&relaxation), fit::combine(&leakage));
@@ -33,11 +35,11 @@ pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValue
     let peaks = both().filter_map(|(_, findings)| findings.peak_drain_voltage_v);
     let of = |budget: &Option<Budget>| budget.as_ref().map(Budget::measured);
     PointValues {
-        leakage_captures,
-        relaxation_frequency_hz: relaxation.map(|ring| ring.frequency_hz),
+        leakage_captures: leakage_set.iter().map(|(number, _)| *number).collect(),
+        relaxation_frequency_hz: observed.relaxation.map(|ring| ring.measured()),
         relaxation_quality_factor: relaxation.map(|ring| ring.quality_factor),
         relaxation_amplitude_v: relaxation.map(|ring| ring.amplitude_v),
-        leakage_frequency_hz: leakage.map(|ring| ring.frequency_hz),
+        leakage_frequency_hz: observed.leakage.map(|ring| ring.measured()),
         leakage_quality_factor: leakage.map(|ring| ring.quality_factor),
         leakage_amplitude_v: leakage.map(|ring| ring.amplitude_v),
         node_capacitance_f: of(&values.node_capacitance),
@@ -54,7 +56,7 @@ pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValue
 
 /// The leakage rings with the captures they are taken from, at the load where they are known best: at the load start they are large,
 /// but the clamp may conduct again on later crests; at the measuring load they are clean, but small.
-fn leakage_rings(captured: &Captured<'_>) -> Option<(Vec<Ring>, Vec<usize>)> {
+fn leakage_rings<'a>(captured: &Captured<'a>) -> Option<(Vec<Ring>, &'a [(usize, Findings)])> {
     let sets = [captured.relaxation, captured.leakage].into_iter();
     let known = sets.filter_map(|set| {
         let rings = rings(set, |findings| findings.leakage_ring);
@@ -62,7 +64,7 @@ fn leakage_rings(captured: &Captured<'_>) -> Option<(Vec<Ring>, Vec<usize>)> {
         Some((uncertainty, rings, set))
     });
     let (_, rings, set) = known.min_by(|a, b| a.0.total_cmp(&b.0))?;
-    Some((rings, set.iter().map(|(number, _)| *number).collect()))
+    Some((rings, set))
 }
 
 /// The rings of the captures, brought to one bulk voltage.

@@ -20,6 +20,11 @@ const TEXTBOOK_HALF_WIDTH: f64 = 0.27;
 const CLAMP_HALF_WIDTH: f64 = 0.015;
 /// Usual leakage over primary inductance where no leakage ring was seen (common practice, 1 to 3 %).
 const USUAL_LEAKAGE: f64 = 0.03;
+/// Rings from which many may tell what one cannot, and the standard uncertainties by which it must stand out.
+const FEWEST_FOR_LAW: usize = 3;
+const LAW_STANDS_OUT: f64 = 2.0;
+/// What a clamp's level is known to in volts from the peak of the drain: its diode's drop, and what noise adds to a peak.
+const RELEASE_V: f64 = 5.0;
 /// Monte Carlo trials that confirm a first-order budget, and their seed.
 const TRIALS: usize = 20_000;
 const SEED: u64 = 1;
@@ -31,6 +36,8 @@ pub struct RingObservation {
     pub frequency_hz: Measured,
     /// Standard uncertainty of the mean by the scatter of the rings beyond noise.
     pub repeatability_hz: f64,
+    /// What the choice of the model leaves open.
+    pub model_hz: f64,
     /// Number of rings.
     pub rings: usize,
     /// Envelope decay in 1/s.
@@ -39,27 +46,63 @@ pub struct RingObservation {
 
 impl RingObservation {
     /// Of several rings: the weighted mean, the noise of it, and what they scatter beyond their noise. `None` for none.
+    ///
+    /// One ring may not tell a weak dependence of its frequency on amplitude, and many would then agree on a wrong mean: where the
+    /// means with and without a free capacitance law differ by more than chance, the one with it is taken.
     pub fn of(rings: &[Ring]) -> Option<Self> {
-        let mean = weighted_mean(rings.iter().map(|ring| ring.frequency_hz))?;
-        let noise = rings.iter().map(|ring| ring.frequency_hz.standard_uncertainty.powi(-2)).sum::<f64>().powf(-0.5);
-        let noise = if noise.is_finite() { noise.min(mean.standard_uncertainty) } else { mean.standard_uncertainty };
+        let plain = Mean::of(rings.iter().map(|ring| ring.frequency_hz))?;
+        let free = Mean::of(rings.iter().map(|ring| ring.alternative_hz.unwrap_or(ring.frequency_hz)))?;
+        let apart = free.value - plain.value;
+        let chance = (free.noise.powi(2) - plain.noise.powi(2)).max(0.0).sqrt();
+        let many = rings.len() >= FEWEST_FOR_LAW && chance > 0.0;
+        let (mean, model_hz) = match many && apart.abs() > LAW_STANDS_OUT * chance {
+            true => (free, 0.0),
+            false => (plain, if many { apart.abs().min(chance) } else { 0.0 }),
+        };
         let decay = weighted_mean(rings.iter().map(|ring| ring.decay_per_s))?;
         Some(Self {
-            frequency_hz: Measured { value: mean.value, standard_uncertainty: noise },
-            repeatability_hz: (mean.standard_uncertainty.powi(2) - noise * noise).max(0.0).sqrt(),
+            frequency_hz: Measured { value: mean.value, standard_uncertainty: mean.noise },
+            repeatability_hz: mean.scatter,
+            model_hz,
             rings: rings.len(),
             decay_per_s: decay.value,
         })
     }
 
-    /// Noise and repeatability as inputs; the frequency is their sum.
-    fn inputs(&self, which: &str) -> [Input; 2] {
+    /// The frequency with all that is not known of it.
+    pub fn measured(&self) -> Measured {
+        let noise = self.frequency_hz.standard_uncertainty;
+        let standard_uncertainty = (noise.powi(2) + self.repeatability_hz.powi(2) + self.model_hz.powi(2)).sqrt();
+        Measured { value: self.frequency_hz.value, standard_uncertainty }
+    }
+
+    /// Noise, repeatability and choice of the model as inputs; the frequency is their sum.
+    fn inputs(&self, which: &str) -> [Input; RING] {
         let scatter = Measured { value: 0.0, standard_uncertainty: self.repeatability_hz };
+        let model = Measured { value: 0.0, standard_uncertainty: self.model_hz };
         let freedom = (self.rings as f64 - 1.0).max(1.0);
         [
             Input::normal(&format!("noise, {which} ring"), Unit::Hertz, self.frequency_hz),
             Input::observed(&format!("repeatability, {which} ring"), Unit::Hertz, scatter, freedom),
+            Input::normal(&format!("choice of the model, {which} ring"), Unit::Hertz, model),
         ]
+    }
+}
+
+/// Weighted mean of several frequencies, its noise, and the scatter beyond it.
+struct Mean {
+    value: f64,
+    noise: f64,
+    scatter: f64,
+}
+
+impl Mean {
+    fn of(values: impl Iterator<Item = Measured> + Clone) -> Option<Self> {
+        let mean = weighted_mean(values.clone())?;
+        let noise = values.map(|m| m.standard_uncertainty.powi(-2)).sum::<f64>().powf(-0.5);
+        let noise = if noise.is_finite() { noise.min(mean.standard_uncertainty) } else { mean.standard_uncertainty };
+        let scatter = (mean.standard_uncertainty.powi(2) - noise * noise).max(0.0).sqrt();
+        Some(Self { value: mean.value, noise, scatter })
     }
 }
 
@@ -74,6 +117,8 @@ pub struct Observed {
     pub bulk_voltage_v: Option<Measured>,
     /// Reflected voltage.
     pub reflected_voltage_v: Option<Measured>,
+    /// Highest drain voltage above the bulk where the leakage ring was seen: the level at which the clamp released it.
+    pub release_v: Option<f64>,
 }
 
 /// What follows.
@@ -140,7 +185,7 @@ impl CircuitValues {
     }
 }
 
-/// The model of the relaxation ring: inputs in the order noise, repeatability, time base, inductance, capacitance behind the leakage.
+/// The model of the relaxation ring: inputs in the order noise, repeatability, choice of the model, time base, inductance, capacitance behind the leakage.
 struct NodeModel<'a> {
     facts: &'a BoardFacts,
     decay_per_s: f64,
@@ -149,8 +194,9 @@ struct NodeModel<'a> {
     leakage_share: f64,
 }
 
-/// Inputs of [`NodeModel`].
-const NODE: usize = 5;
+/// Inputs of one ring, and of [`NodeModel`].
+const RING: usize = 3;
+const NODE: usize = RING + 3;
 
 impl<'a> NodeModel<'a> {
     fn new(relaxation: &RingObservation, observed: &Observed, facts: &'a BoardFacts) -> Self {
@@ -171,9 +217,9 @@ impl<'a> NodeModel<'a> {
 
     /// Capacitance that rings with the whole primary inductance, in farad.
     fn ringing(&self, x: &[f64]) -> f64 {
-        let frequency = (x[0] + x[1]) * (1.0 + x[2]);
+        let frequency = x[..RING].iter().sum::<f64>() * (1.0 + x[RING]);
         let snubber = self.facts.pieces.snubber.as_ref();
-        other_element(frequency, self.decay_per_s, Known::Inductance(x[3]), snubber).unwrap_or(f64::NAN)
+        other_element(frequency, self.decay_per_s, Known::Inductance(x[RING + 1]), snubber).unwrap_or(f64::NAN)
     }
 
     fn capacitance(&self, name: &str, without_probe: bool) -> Option<Budget> {
@@ -182,7 +228,7 @@ impl<'a> NodeModel<'a> {
             let probe = self.facts.probe_capacitance_f?;
             inputs.push(Input::normal("probe capacitance", Unit::Farad, probe).in_common());
         }
-        let model = |x: &[f64]| self.ringing(x) + x[4] - x.get(NODE).copied().unwrap_or(0.0);
+        let model = |x: &[f64]| self.ringing(x) + x[NODE - 1] - x.get(NODE).copied().unwrap_or(0.0);
         Model::new(name, Unit::Farad, inputs, model).first_order().ok()
     }
 
@@ -199,12 +245,13 @@ impl<'a> NodeModel<'a> {
         let snubber = facts.pieces.snubber.as_ref();
         let model = |x: &[f64]| {
             let ringing = self.ringing(x);
-            let plateau = match x[NODE + 1..] {
+            let (leakage_inputs, parts) = x[NODE - 1..].split_at(RING);
+            let plateau = match *parts {
                 [factor] => ringing * factor,
                 [secondary, fall, rise] => ringing - secondary * share * share - fall + rise,
                 _ => f64::NAN,
             };
-            let frequency = (x[NODE - 1] + x[NODE]) * (1.0 + x[2]);
+            let frequency = leakage_inputs.iter().sum::<f64>() * (1.0 + x[RING]);
             other_element(frequency, leakage.decay_per_s, Known::Capacitance(plateau), snubber).unwrap_or(f64::NAN)
         };
         let model = Model::new("leakage inductance", Unit::Henry, inputs, model);
@@ -219,10 +266,13 @@ impl<'a> NodeModel<'a> {
         let (bulk, reflected) = (observed.bulk_voltage_v?.value, observed.reflected_voltage_v?.value);
         let fall = transistor.at(bulk) - transistor.at(bulk + reflected);
         let fall = Measured { value: fall, standard_uncertainty: fall.abs() * transistor.relative_uncertainty };
-        let rise = match (&pieces.clamp_diode, pieces.clamp_v) {
-            (Some(diode), Some(clamp)) => {
-                let rise = diode.at(clamp - reflected) - diode.at(clamp);
-                Measured { value: rise, standard_uncertainty: rise.abs() * diode.relative_uncertainty }
+        let level = observed.release_v.filter(|&v| v > reflected).or(pieces.clamp_v);
+        let rise = match (&pieces.clamp_diode, level) {
+            (Some(diode), Some(level)) => {
+                let rise = |level: f64| diode.at(level - reflected) - diode.at(level);
+                let by_level = rise(level) - rise(level + RELEASE_V);
+                let value = rise(level);
+                Measured { value, standard_uncertainty: by_level.hypot(value * diode.relative_uncertainty) }
             }
             (_, None) => Measured::exact(0.0),
             (None, Some(_)) => Measured::within(0.0, CLAMP_HALF_WIDTH * self.ringing(&self.values())),

@@ -1,7 +1,7 @@
 //! Many rings of one node taken together: brought to one bulk voltage, and the test that they belong together.
 
 use super::ring::weighted_mean;
-use crate::findings::Ring;
+use crate::{findings::Ring, quantity::Measured};
 use statrs::distribution::{ChiSquared, ContinuousCDF};
 
 /// Standard uncertainties that a slope of frequency over voltage must stand out by to be taken out.
@@ -43,6 +43,7 @@ fn moved((ring, level_v): &(Ring, f64), slope: f64, mean_v: f64) -> Ring {
     let mut moved = *ring;
     moved.frequency_hz.value += by;
     moved.damped_frequency_hz.value += by;
+    moved.alternative_hz = moved.alternative_hz.map(|hz| Measured { value: hz.value + by, ..hz });
     moved
 }
 
