@@ -53,8 +53,10 @@ impl RingObservation {
         let plain = Mean::of(rings.iter().map(|ring| ring.frequency_hz))?;
         let free = Mean::of(rings.iter().map(|ring| ring.alternative_hz.unwrap_or(ring.frequency_hz)))?;
         let apart = free.value - plain.value;
-        let chance = (free.noise.powi(2) - plain.noise.powi(2)).max(0.0).sqrt();
-        let many = rings.len() >= FEWEST_FOR_LAW && chance > 0.0;
+        // Nested models differ by the variance that the larger one has more. Rings of many amplitudes scatter where the smaller one is
+        // wrong, which makes it look less sure than the larger.
+        let chance = (free.noise.powi(2) - plain.noise.powi(2)).max(0.25 * free.noise.powi(2)).sqrt();
+        let many = rings.len() >= FEWEST_FOR_LAW && rings.iter().any(|ring| ring.alternative_hz.is_some());
         let (mean, model_hz) = match many && apart.abs() > LAW_STANDS_OUT * chance {
             true => (free, 0.0),
             false => (plain, if many { apart.abs().min(chance) } else { 0.0 }),
