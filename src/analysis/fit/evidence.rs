@@ -71,8 +71,10 @@ const CIRCUIT: f64 = 16.0;
 const DEGREE: f64 = 6.0;
 /// Share of its threshold that a step must promise by its slope alone to be worth a fit.
 const SCREEN: f64 = 0.3;
-/// Share of its fall by which a law may rise elsewhere: a polynomial follows a knee only so far.
-const RISE: f64 = 0.1;
+/// Share of its range by which a law may go the wrong way: a polynomial follows a knee only so far.
+const WRONG: f64 = 0.1;
+/// Range of a law, over its lowest value, below which rising is no rectifier's doing.
+const FAINT: f64 = 0.02;
 /// Ring periods from which a leakage ring's floor is bent always: the plateau droops, and a bend costs under 4 % there.
 const BENT_PERIODS: f64 = 6.0;
 /// Iterations of one fit.
@@ -98,14 +100,22 @@ impl Described {
         (other.solution.squares - self.solution.squares) / self.noise.variance.max(f64::MIN_POSITIVE)
     }
 
-    /// Whether the law is that of a junction: it falls with voltage wherever the ring swings, but for a small share of its range.
+    /// Whether the law is that of a drain node: the transistor's capacitance falls with voltage, and that of rectifier and clamp rises
+    /// towards the crest, where they come near to conducting. So it falls, or falls and then rises, but for a small share of its range;
+    /// one that rises at all must do more than the faint curvature of a core.
     fn sane(&self) -> bool {
         let Model::Circuit(equation) = self.model else { return true };
-        let laws: Vec<f64> =
-            (-9..=9).map(|n| equation.relative_capacitance(&self.solution.nonlinear, 0.1 * f64::from(n))).collect();
-        let rises: f64 = laws.windows(2).map(|pair| (pair[1] - pair[0]).max(0.0)).sum();
-        let falls: f64 = laws.windows(2).map(|pair| (pair[0] - pair[1]).max(0.0)).sum();
-        self.solution.nonlinear[0] > 0.0 && rises <= RISE * falls
+        let laws: Vec<f64> = (-9..=9)
+            .map(|n| equation.relative_capacitance(&self.solution.nonlinear, 0.1 * f64::from(n)))
+            .collect();
+        let lowest = laws.iter().copied().fold(f64::INFINITY, f64::min);
+        let highest = laws.iter().copied().fold(0.0, f64::max);
+        let valley = laws.iter().position(|&law| law == lowest).unwrap_or(0);
+        let against = |part: &[f64], sign: f64| part.windows(2).map(|p| (sign * (p[1] - p[0])).max(0.0)).sum::<f64>();
+        let rising = against(&laws[valley..], 1.0);
+        let wrong = against(&laws[..=valley], 1.0) + against(&laws[valley..], -1.0);
+        let faint = rising > WRONG * (highest - lowest) && highest < (1.0 + FAINT) * lowest;
+        self.solution.nonlinear[0] > 0.0 && wrong <= WRONG * (highest - lowest) && !faint
     }
 
     /// The nonlinear parameters of a model that has more, to begin with.

@@ -197,6 +197,7 @@ fn leakage_inductance_is_right_where_the_parts_are_stated() {
         leakage: rings(leakage, plateau),
         bulk_voltage_v: Some(Measured::exact(bulk)),
         reflected_voltage_v: Some(Measured::exact(reflected)),
+        ..Observed::default()
     };
     let textbook = CircuitValues::of(&observed, &facts(Measured::exact(primary)));
     let low = textbook.leakage_inductance.unwrap();
