@@ -170,7 +170,8 @@ fn single(tried: &Tried<'_>) -> Result<Vec<Doubt>, Doubt> {
             doubts.push(doubt(DoubtName::AmplitudeDependent, sentence.to_owned()));
         }
     }
-    let distorted = doubts.iter().any(|doubt| doubt.name == DoubtName::AmplitudeDependent);
+    // Distortion excuses what a damped sinusoid leaves, not what the circuit equation leaves.
+    let distorted = tried.shift.is_none() && doubts.iter().any(|doubt| doubt.name == DoubtName::AmplitudeDependent);
     match misfit(tried).filter(|_| !distorted && tried.fit.kind == RingKind::Relaxation) {
         Some(doubt) => Err(doubt),
         None => Ok(doubts),
