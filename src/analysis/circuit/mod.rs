@@ -1,5 +1,8 @@
 //! What rings say about the circuit: node capacitance from the relaxation ring, leakage inductance from the leakage ring.
 
+pub mod added;
+pub mod straight_line;
+
 use crate::{findings::Ring, quantity::Measured};
 use std::f64::consts::TAU;
 
