@@ -350,8 +350,8 @@ fn records_of_other_voltages_are_refused_or_corrected() {
     let refusal = plain(&at_voltages([300.0, 300.0, 270.0], [95.0; 3])).unwrap_err();
     assert!(refusal.to_string().starts_with("the bulk voltage is 270.0 V"), "{refusal}");
     assert!(refusal.to_string().contains("same line voltage and load"), "{refusal}");
-    let refusal = plain(&at_voltages([300.0; 3], [95.0, 95.0, 90.0])).unwrap_err();
-    assert!(refusal.to_string().starts_with("the reflected voltage is 90.0 V"), "{refusal}");
+    let refusal = plain(&at_voltages([300.0; 3], [95.0, 95.0, 80.0])).unwrap_err();
+    assert!(refusal.to_string().starts_with("the reflected voltage is 80.0 V"), "{refusal}");
     // Within the tolerance the intervals allow for what the voltage may have done.
     for voltages in [[300.0, 303.0, 297.5], [300.0, 295.0, 294.2]] {
         let close = plain(&at_voltages(voltages, [95.0; 3]));

@@ -8,7 +8,10 @@ mod voltages;
 pub use refusal::{AddedDoubt, AddedDoubtName, AddedRefusal};
 
 use super::straight_line::StraightLine;
-use crate::quantity::{Measured, Unit};
+use crate::{
+    findings::{Findings, RingKind},
+    quantity::{Measured, Unit},
+};
 use nalgebra::DMatrix;
 use serde::{Deserialize, Serialize};
 use statrs::distribution::{ChiSquared, ContinuousCDF};
@@ -40,6 +43,18 @@ pub struct AddedPoint {
     pub reflected_voltage_v: Option<Measured>,
 }
 
+impl AddedPoint {
+    /// The ring of one analysed record with that much added to the node; `None` where the record shows no such ring.
+    pub fn of(capacitance_f: Measured, findings: &Findings, kind: RingKind) -> Option<Self> {
+        let ring = match kind {
+            RingKind::Relaxation => findings.relaxation_ring,
+            RingKind::Leakage => findings.leakage_ring,
+        };
+        let Findings { bulk_voltage_v, reflected_voltage_v, .. } = *findings;
+        Some(Self { capacitance_f, frequency_hz: ring?.frequency_hz, bulk_voltage_v, reflected_voltage_v })
+    }
+}
+
 /// What is common to the points, and how far their voltages may lie apart.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct AddedOptions {
@@ -50,7 +65,8 @@ pub struct AddedOptions {
     pub common_meter: f64,
     /// Relative standard uncertainty of the time base. It moves the inductance, and leaves the capacitance alone.
     pub time_base: f64,
-    /// Relative difference of bulk voltage, or of reflected voltage, up to which two records match.
+    /// Difference of bulk voltage, relative to it, and of reflected voltage, relative to that of the plateau, up to which the
+    /// records match.
     pub voltage_tolerance: f64,
     /// Change of the bare node's ring frequency with bulk voltage, in hertz per volt: with it, records are corrected to the
     /// bulk voltage of the one with the least capacitance.

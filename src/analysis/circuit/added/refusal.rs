@@ -80,8 +80,8 @@ pub enum AddedRefusal {
     },
     /// The records belong to different working points.
     #[error(
-        "the {what} voltage is {one_v:.1} V in one record and {other_v:.1} V in another, {percent:.1} % apart where {allowed:.1} % \
-         will do: {remedy}"
+        "the {what} voltage is {one_v:.1} V in one record and {other_v:.1} V in another: {percent:.1} % of the node's voltage, where \
+         {allowed:.1} % will do; {remedy}"
     )]
     VoltagesDiffer {
         /// `bulk` or `reflected`.
@@ -90,7 +90,7 @@ pub enum AddedRefusal {
         one_v: f64,
         /// Highest voltage.
         other_v: f64,
-        /// Difference.
+        /// Difference over the voltage the node stands at: the bulk's, or the plateau's for the reflected voltage.
         percent: f64,
         /// Tolerance.
         allowed: f64,

@@ -30,9 +30,14 @@ pub(super) fn matching(
     } else {
         "record all of them at the same line voltage and load, or state how the frequency moves with bulk voltage"
     };
-    within("bulk", points.iter().map(|point| point.bulk_voltage_v), reach * options.voltage_tolerance, remedy)?;
+    let [bulk_v, reflected_v] = [|p: &AddedPoint| p.bulk_voltage_v, |p: &AddedPoint| p.reflected_voltage_v].map(
+        |pick: fn(&AddedPoint) -> Option<Measured>| points.iter().filter_map(pick).map(|v| v.value).collect::<Vec<_>>(),
+    );
+    let bulk_mean_v = bulk_v.iter().sum::<f64>() / bulk_v.len().max(1) as f64;
+    within("bulk", &bulk_v, 0.0, reach * options.voltage_tolerance, remedy)?;
     let remedy = "record all of them at the same output voltage and load";
-    within("reflected", points.iter().map(|point| point.reflected_voltage_v), options.voltage_tolerance, remedy)?;
+    // What counts is the voltage the node stands at, and the knee is read with what the leakage ring has left on it.
+    within("reflected", &reflected_v, bulk_mean_v, options.voltage_tolerance, remedy)?;
     if points.iter().any(|point| point.bulk_voltage_v.is_none()) {
         doubts.push(AddedDoubt {
             name: AddedDoubtName::VoltagesUnknown,
@@ -65,17 +70,17 @@ pub(super) fn matching(
     Ok(moved.collect())
 }
 
-/// Refuses voltages that differ by more than a share of that of the first record.
+/// Refuses voltages that differ by more than a share of the level they reach from `base_v`.
 fn within(
     what: &'static str,
-    voltages: impl Iterator<Item = Option<Measured>>,
+    values: &[f64],
+    base_v: f64,
     allowed: f64,
     remedy: &'static str,
 ) -> Result<(), AddedRefusal> {
-    let values: Vec<f64> = voltages.flatten().map(|voltage| voltage.value).collect();
-    let [low_v, high_v] =
-        values.iter().fold([f64::INFINITY, f64::NEG_INFINITY], |[low, high], v| [v.min(low), v.max(high)]);
-    let apart = (high_v - low_v) / (0.5 * (high_v + low_v).abs());
+    let low_v = values.iter().copied().fold(f64::INFINITY, f64::min);
+    let high_v = values.iter().copied().fold(f64::NEG_INFINITY, f64::max);
+    let apart = (high_v - low_v) / (base_v + 0.5 * (high_v + low_v)).abs();
     if values.len() < 2 || apart <= allowed {
         return Ok(());
     }
