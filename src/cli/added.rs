@@ -3,6 +3,7 @@
 
 use super::output;
 use clap::Args;
+use ringstep::sequence::event::AddedOutcome;
 use ringstep_analysis::{
     circuit::added::{AddedOptions, AddedPoint, AddedResult, added_capacitors},
     findings::{BoardFacts, Findings, RingKind, Subject},
@@ -200,6 +201,24 @@ fn values(
         vec![name.to_owned(), found.text_with_95_percent_interval(unit), nominal]
     };
     names.into_iter().zip(found).zip(nominal).map(row).collect()
+}
+
+/// What the added capacitors of a run say, as lines.
+pub(crate) fn outcome(outcome: &AddedOutcome) -> String {
+    let mut lines = vec![format!("With added capacitors at {} V line, without a nominal value:", outcome.line_v)];
+    let names = [
+        ("primary inductance", "node capacitance, probe included", &outcome.relaxation),
+        ("leakage inductance", "node capacitance on the plateau", &outcome.leakage),
+    ];
+    for (inductance, capacitance, result) in names {
+        let Some(result) = result else { continue };
+        lines.push(format!("  {inductance} {}", result.inductance_h.text_with_95_percent_interval(Unit::Henry)));
+        lines.push(format!("  {capacitance} {}", result.node_capacitance_f.text_with_95_percent_interval(Unit::Farad)));
+        lines.extend(result.doubts.iter().map(|doubt| format!("  - {}", doubt.sentence)));
+    }
+    lines.extend(outcome.refusals.iter().map(|refusal| format!("  - {refusal}")));
+    lines.extend(outcome.doubts.iter().map(|doubt| format!("  - {}", doubt.sentence)));
+    lines.join("\n")
 }
 
 fn interval(measured: Measured) -> [f64; 2] {

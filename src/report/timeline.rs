@@ -2,6 +2,7 @@
 
 use super::text;
 use crate::{record::journal::Entry, sequence::event::Event};
+use ringstep_analysis::quantity::Unit;
 
 /// One line of the timeline.
 #[derive(Debug)]
@@ -57,6 +58,29 @@ fn tell(event: &Event) -> (&'static str, String) {
         Event::PointRefused { line_v, reason, .. } => {
             ("refused", format!("Point at {} line refused: {reason}", text::short(*line_v, "V")))
         }
+        Event::Discharge(discharge) => {
+            let bulk = discharge.bulk_v.map_or("not known".to_owned(), |bulk_v| text::short(bulk_v, "V"));
+            let output = text::short(discharge.output_v, "V");
+            ("by hand", format!("Power taken off; bulk voltage {bulk}, output at {output}."))
+        }
+        Event::HandworkAsked(work) => {
+            let what = work.fit.map_or("removal of the capacitor".to_owned(), |capacitance| {
+                format!("fitting of {}", capacitance.text_with_standard_uncertainty(Unit::Farad))
+            });
+            ("by hand", format!("Asked for: {what}."))
+        }
+        Event::HandworkDone { capacitance_f, bulk_v } => {
+            let (fitted, bulk) = (text::short(*capacitance_f, "F"), text::short(*bulk_v, "V"));
+            ("by hand", format!("Confirmed: {fitted} fitted; bulk capacitor measured by hand at {bulk}."))
+        }
+        Event::AddedPointFinished(point) => {
+            let farad = point.capacitance_f.text_with_standard_uncertainty(Unit::Farad);
+            ("point", format!("Point at {} line with {farad} added finished.", text::short(point.line_v, "V")))
+        }
+        Event::AddedCapacitorRefused { capacitance_f, reason } => {
+            ("refused", format!("Added capacitor of {} not measured: {reason}.", text::short(*capacitance_f, "F")))
+        }
+        Event::AddedCapacitorsFinished(_) => ("point", "Inductance and capacitance from added capacitors.".to_owned()),
         Event::Noted { note } => ("note", note.clone()),
         Event::SafeOff { reason, source_off, load_off } => {
             let confirmed = |off: &bool| if *off { "confirmed off" } else { "NOT confirmed off" };

@@ -86,7 +86,13 @@ fn panicked(panic: &(dyn Any + Send)) -> String {
 }
 
 /// Measures every point; returns how many were measured and how many refused.
+///
+/// The added capacitors of the plan count as one more.
 async fn points(job: &Job, connected: &mut Connected, keeper: &mut dyn Keeper) -> Result<(usize, usize), RunError> {
+    let operator = connected.operator.clone();
+    if job.plan.added_capacitors.is_some() && operator.is_none() {
+        return Err(RunError::Unattended);
+    }
     let mut bench = Bench {
         job,
         scope: &mut *connected.scope,
@@ -102,11 +108,16 @@ async fn points(job: &Job, connected: &mut Connected, keeper: &mut dyn Keeper) -
         survey_window_s: None,
     };
     bench.prepare().await?;
-    let mut measured = 0;
+    let mut measured = Vec::new();
     for (index, line_v) in job.plan.line_v.iter().enumerate() {
-        measured += usize::from(bench.measure_point(index, *line_v).await?);
+        measured.extend(bench.measure_point(index, *line_v).await?);
     }
-    Ok((measured, job.plan.line_v.len() - measured))
+    let (mut done, mut wanted) = (measured.len(), job.plan.line_v.len());
+    if let (Some(added), Some(operator)) = (&job.plan.added_capacitors, operator) {
+        wanted += 1;
+        done += usize::from(bench.add_capacitors(added, &measured, &*operator).await?);
+    }
+    Ok((done, wanted - done))
 }
 
 impl Bench<'_> {
