@@ -2,6 +2,7 @@
 #![allow(clippy::unwrap_used, missing_docs, unreachable_pub)]
 
 mod added;
+mod added_run;
 mod by_hand;
 mod cli;
 mod dialects;

@@ -4,8 +4,9 @@
 use super::{
     AddedCapacitors, AddedPart, RunError,
     bench::Bench,
-    combine::{Captured, combine},
+    combine::{Captured, combine, leakage_frequencies},
     event::{AddedOutcome, AddedPointValues, AddedStress, Discharge, Event, Handwork, Point, PointValues},
+    point::MeasuredPoint,
 };
 use crate::station::{CAUTIONS, Operator};
 use ringstep_analysis::{
@@ -21,6 +22,23 @@ const ATTEMPTS: usize = 10;
 /// Standard deviations between the two measurements of the bare node that are doubted: one in a hundred by chance.
 const BARE_DISAGREES: f64 = 2.58;
 
+/// The node with one capacitor, or none: what the lines are drawn through.
+struct Node {
+    capacitance_f: Measured,
+    relaxation_hz: Option<Measured>,
+    /// At the measuring load and at the load start.
+    leakage_hz: [Option<Measured>; 2],
+    bulk_v: Option<Measured>,
+    reflected_v: Option<Measured>,
+}
+
+impl Node {
+    fn new(capacitance_f: Measured, values: &PointValues, leakage_hz: [Option<Measured>; 2]) -> Self {
+        let (bulk_v, reflected_v) = (values.bulk_voltage_v, values.reflected_voltage_v);
+        Self { capacitance_f, relaxation_hz: values.relaxation_frequency_hz, leakage_hz, bulk_v, reflected_v }
+    }
+}
+
 /// Why the work with capacitors ends early: the person called it off.
 struct CalledOff(String);
 
@@ -29,14 +47,15 @@ impl Bench<'_> {
     pub(super) async fn add_capacitors(
         &mut self,
         added: &AddedCapacitors,
-        measured: &[Point],
+        measured: &[MeasuredPoint],
         operator: &dyn Operator,
     ) -> Result<bool, RunError> {
-        let Some(bare) = measured.iter().find(|point| point.line_v == added.line_v) else {
+        let Some(before) = measured.iter().find(|measured| measured.point.line_v == added.line_v) else {
             return self.refuse(0.0, format!("the bare node was not measured at {} V line", added.line_v));
         };
+        let bare = &before.point;
         self.point = bare.index;
-        let mut points = vec![(Measured::exact(0.0), bare.values.clone())];
+        let mut points = vec![Node::new(Measured::exact(0.0), &bare.values, before.leakage_frequencies_hz)];
         let mut whole = true;
         for part in &added.parts {
             let stress = self.stress(added, part, bare);
@@ -50,14 +69,14 @@ impl Bench<'_> {
                 whole = false;
                 break;
             }
-            points.push((part.capacitance_f, self.rings_again(part.capacitance_f, bare).await?));
+            points.push(self.rings_again(part.capacitance_f, bare).await?);
         }
         if points.len() == 1 {
             return Ok(false);
         }
         let again = self.bare_again(bare, operator).await?;
         whole &= again.is_some();
-        let outcome = outcome(added, bare, points, again);
+        let outcome = outcome(added, [bare.load_a, self.job.plan.load_start_a], bare, points, again);
         let told = outcome.relaxation.is_some();
         self.keeper.event(&Event::AddedCapacitorsFinished(outcome))?;
         Ok(whole && told)
@@ -132,7 +151,7 @@ impl Bench<'_> {
     }
 
     /// The rings at the line voltage and the load of the bare point.
-    async fn rings_again(&mut self, capacitance_f: Measured, bare: &Point) -> Result<PointValues, RunError> {
+    async fn rings_again(&mut self, capacitance_f: Measured, bare: &Point) -> Result<Node, RunError> {
         self.set_line(bare.line_v).await?;
         self.draw(self.job.plan.load_start_a).await?;
         self.settle_output().await?;
@@ -141,16 +160,17 @@ impl Bench<'_> {
         let (survey, _) = self.survey_at(bare.load_a).await?;
         let relaxation = self.relaxation_rings(&survey).await?;
         let captured = Captured { survey: &survey, relaxation: &relaxation, leakage: &leakage };
-        let values = combine(&captured, &self.facts);
+        let (values, leakage_frequencies_hz) = (combine(&captured, &self.facts), leakage_frequencies(&captured));
+        let node = Node::new(capacitance_f, &values, leakage_frequencies_hz);
         let findings = leakage.into_iter().chain(relaxation).chain([(survey.number, survey.findings)]).collect();
         let (line_v, load_a) = (self.line_v, self.load_a);
-        let point = AddedPointValues { capacitance_f, line_v, load_a, values: values.clone(), findings };
+        let point = AddedPointValues { capacitance_f, line_v, load_a, leakage_frequencies_hz, values, findings };
         self.keeper.event(&Event::AddedPointFinished(point))?;
-        Ok(values)
+        Ok(node)
     }
 
     /// The bare node once more; `None` where the capacitor was not taken off.
-    async fn bare_again(&mut self, bare: &Point, operator: &dyn Operator) -> Result<Option<PointValues>, RunError> {
+    async fn bare_again(&mut self, bare: &Point, operator: &dyn Operator) -> Result<Option<Node>, RunError> {
         match self.handwork(Handwork { fit: None, predicted: None }, true, operator).await? {
             Ok(()) => self.rings_again(Measured::exact(0.0), bare).await.map(Some),
             Err(CalledOff(reason)) => {
@@ -263,52 +283,56 @@ async fn answer(prompt: &str, operator: &dyn Operator) -> Result<String, CalledO
     answer.ok_or_else(|| CalledOff("the operator called it off".to_owned()))
 }
 
-/// The lines through all points, and whether the bare node stayed what it was.
+/// The lines through all points, and whether the bare node stayed what it was; `loads_a` are the measuring load and the load
+/// start.
 fn outcome(
     added: &AddedCapacitors,
+    loads_a: [f64; 2],
     bare: &Point,
-    mut points: Vec<(Measured, PointValues)>,
-    again: Option<PointValues>,
+    mut nodes: Vec<Node>,
+    again: Option<Node>,
 ) -> AddedOutcome {
     let mut outcome = AddedOutcome { point: bare.index, line_v: bare.line_v, ..AddedOutcome::default() };
-    match again {
-        Some(again) => {
-            outcome.doubts.extend(bare_moved(
-                "relaxation",
-                |values| values.relaxation_frequency_hz,
-                &bare.values,
-                &again,
-            ));
-            outcome.doubts.extend(bare_moved("leakage", |values| values.leakage_frequency_hz, &bare.values, &again));
-            points.push((Measured::exact(0.0), again));
-        }
-        None => outcome.doubts.push(AddedDoubt {
+    if again.is_none() {
+        outcome.doubts.push(AddedDoubt {
             name: AddedDoubtName::BareNodeMoved,
             sentence: "The bare node was not measured again, so that nothing tells whether it stayed what it was."
                 .to_owned(),
-        }),
+        });
     }
-    let mut refusals = Vec::new();
-    let mut line = |name, pick: fn(&PointValues) -> Option<Measured>| {
-        line(added, &points, pick).map_err(|refusal| refusals.push(format!("{name} ring: {refusal}"))).ok()
-    };
-    outcome.relaxation = line("relaxation", |values| values.relaxation_frequency_hz);
-    outcome.leakage = line("leakage", |values| values.leakage_frequency_hz);
-    outcome.refusals = refusals;
+    nodes.extend(again);
+    let relaxation_hz = |node: &Node| node.relaxation_hz;
+    match line(added, &nodes, relaxation_hz) {
+        Ok(result) => outcome.relaxation = Some(result),
+        Err(refusal) => outcome.refusals.push(format!("relaxation ring: {refusal}")),
+    }
+    outcome.doubts.extend(bare_moved("relaxation", &nodes, relaxation_hz));
+    let lines = [0, 1].map(|load| line(added, &nodes, |node| node.leakage_hz[load]));
+    let uncertainty =
+        |load: &usize| lines[*load].as_ref().map_or(f64::INFINITY, |r| r.inductance_h.relative_uncertainty());
+    let load = usize::from(uncertainty(&1) < uncertainty(&0));
+    match &lines[load] {
+        Ok(result) => {
+            outcome.leakage = Some(result.clone());
+            outcome.leakage_load_a = Some(loads_a[load]);
+            outcome.doubts.extend(bare_moved("leakage", &nodes, |node| node.leakage_hz[load]));
+        }
+        Err(refusal) => outcome.refusals.push(format!("leakage ring: {refusal}")),
+    }
     outcome
 }
 
 fn line(
     added: &AddedCapacitors,
-    points: &[(Measured, PointValues)],
-    frequency_hz: fn(&PointValues) -> Option<Measured>,
+    nodes: &[Node],
+    frequency_hz: impl Fn(&Node) -> Option<Measured>,
 ) -> Result<AddedResult, String> {
-    let points = points.iter().filter_map(|(capacitance_f, values)| {
+    let points = nodes.iter().filter_map(|node| {
         Some(AddedPoint {
-            capacitance_f: *capacitance_f,
-            frequency_hz: frequency_hz(values)?,
-            bulk_voltage_v: values.bulk_voltage_v,
-            reflected_voltage_v: values.reflected_voltage_v,
+            capacitance_f: node.capacitance_f,
+            frequency_hz: frequency_hz(node)?,
+            bulk_voltage_v: node.bulk_v,
+            reflected_voltage_v: node.reflected_v,
         })
     });
     let (lead_stray_f, common_meter) = (added.lead_stray_f, added.common_meter);
@@ -316,14 +340,11 @@ fn line(
     added_capacitors(&points.collect::<Vec<_>>(), &options).map_err(|refusal| refusal.to_string())
 }
 
-/// A doubt where the bare node rings at another frequency than before, by more than chance.
-fn bare_moved(
-    name: &str,
-    pick: fn(&PointValues) -> Option<Measured>,
-    before: &PointValues,
-    after: &PointValues,
-) -> Option<AddedDoubt> {
-    let (before, after) = (pick(before)?, pick(after)?);
+/// A doubt where the bare node, first and last of all, rings at another frequency than before by more than chance.
+fn bare_moved(name: &str, nodes: &[Node], frequency_hz: impl Fn(&Node) -> Option<Measured>) -> Option<AddedDoubt> {
+    let bare = |node: &&Node| node.capacitance_f.value == 0.0;
+    let before = frequency_hz(nodes.first().filter(bare)?)?;
+    let after = frequency_hz(nodes.last().filter(bare)?)?;
     let both = before.standard_uncertainty.hypot(after.standard_uncertainty);
     if (after.value - before.value).abs() <= BARE_DISAGREES * both {
         return None;

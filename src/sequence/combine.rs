@@ -39,6 +39,12 @@ pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValue
     }
 }
 
+/// Leakage-ring frequencies at the measuring load and at the load start, apart: they differ, for the ring is larger at one.
+pub(super) fn leakage_frequencies(captured: &Captured<'_>) -> [Option<Measured>; 2] {
+    let frequency = |set| ring(set, |findings| findings.leakage_ring).map(|ring| ring.frequency_hz);
+    [frequency(captured.relaxation), frequency(captured.leakage)]
+}
+
 /// The leakage ring with the captures it is taken from, at the load where it is known best: at the load start it is large, but
 /// the clamp may conduct again on later crests; at the measuring load it is clean, but small.
 fn leakage_ring(captured: &Captured<'_>) -> Option<(Ring, Vec<usize>)> {

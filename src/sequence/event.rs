@@ -282,6 +282,8 @@ pub struct AddedPointValues {
     pub line_v: f64,
     /// Load current at which the relaxation rings were captured.
     pub load_a: f64,
+    /// Leakage-ring frequencies at the measuring load and at the load start.
+    pub leakage_frequencies_hz: [Option<Measured>; 2],
     /// Values; the node capacitance from the nominal inductance has the capacitor in it.
     pub values: PointValues,
     /// Findings of each capture, by capture number.
@@ -299,6 +301,9 @@ pub struct AddedOutcome {
     pub relaxation: Option<AddedResult>,
     /// Leakage inductance and node capacitance on the plateau, probe included.
     pub leakage: Option<AddedResult>,
+    /// Load current at which the leakage rings behind it were captured: the measuring load or the load start, for all points the
+    /// same, whichever tells it better.
+    pub leakage_load_a: Option<f64>,
     /// Why one of them is missing, a sentence each.
     pub refusals: Vec<String>,
     /// Doubts about the whole.

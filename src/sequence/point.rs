@@ -3,19 +3,26 @@
 use super::{
     RunError,
     bench::Bench,
-    combine::{Captured, combine},
+    combine::{Captured, combine, leakage_frequencies},
     descent::{Descent, Stepped},
     event::{Event, Point},
     survey::Survey,
 };
-use ringstep_analysis::findings::Findings;
+use ringstep_analysis::{findings::Findings, quantity::Measured};
+
+/// A point that was measured, with what its event does not tell.
+pub(super) struct MeasuredPoint {
+    pub(super) point: Point,
+    /// At the measuring load and at the load start.
+    pub(super) leakage_frequencies_hz: [Option<Measured>; 2],
+}
 
 /// Relative movement of the line that counts as a change of it.
 const SAME_LINE: f64 = 1e-9;
 
 impl Bench<'_> {
     /// Measures one point; `None` where it had to be refused.
-    pub(super) async fn measure_point(&mut self, index: usize, line_v: f64) -> Result<Option<Point>, RunError> {
+    pub(super) async fn measure_point(&mut self, index: usize, line_v: f64) -> Result<Option<MeasuredPoint>, RunError> {
         self.point = index;
         self.set_line(line_v).await?;
         self.draw(self.job.plan.load_start_a).await?;
@@ -36,11 +43,11 @@ impl Bench<'_> {
         &mut self,
         descent: Descent,
         leakage: Vec<(usize, Findings)>,
-    ) -> Result<Option<Point>, RunError> {
+    ) -> Result<Option<MeasuredPoint>, RunError> {
         let (index, line_v) = (self.point, self.line_v);
         let relaxation = self.relaxation_rings(&descent.survey).await?;
         let captured = Captured { survey: &descent.survey, relaxation: &relaxation, leakage: &leakage };
-        let values = combine(&captured, &self.facts);
+        let (values, leakage_frequencies_hz) = (combine(&captured, &self.facts), leakage_frequencies(&captured));
         let measured = values.relaxation_frequency_hz.is_some();
         if !measured {
             let reason = doubts_of(&relaxation);
@@ -59,7 +66,7 @@ impl Bench<'_> {
             findings: findings.collect(),
         };
         self.keeper.event(&Event::PointFinished(point.clone()))?;
-        Ok(Some(point))
+        Ok(Some(MeasuredPoint { point, leakage_frequencies_hz }))
     }
 
     /// Brings the line to a voltage with the load off while nothing is energised yet, or as it stands afterwards.
