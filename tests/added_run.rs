@@ -1,6 +1,7 @@
 //! A plan with added capacitors carried out on the simulated bench, in a process of its own, with hands that solder when they
 //! are asked to: what is asked, in which order, and what comes out of it.
 
+use crate::need::need_python;
 use ringstep::{
     instrument::Drivers,
     record::{Inputs, Results, Run, RunWriter},
@@ -137,8 +138,8 @@ enum Manner {
     Willing,
     /// Calls it off at the second capacitor.
     CallsOff,
-    /// Never answers.
-    Absent,
+    /// Fits the first capacitor and goes away.
+    GoesAway,
     /// Leaves the first capacitor in when asked to take it off.
     Forgetful,
 }
@@ -154,7 +155,7 @@ struct Hands {
 impl Operator for Hands {
     fn ask<'a>(&'a self, prompt: &'a str) -> Pin<Box<dyn Future<Output = Option<String>> + Send + 'a>> {
         self.prompts.lock().unwrap().push(prompt.to_owned());
-        if self.manner == Manner::Absent {
+        if self.manner == Manner::GoesAway && *self.fitted.lock().unwrap() == 1 {
             return Box::pin(std::future::pending());
         }
         let answer = self.answer(prompt);
@@ -189,7 +190,9 @@ struct Folder(RunWriter, Option<Stopper>);
 
 impl Keeper for Folder {
     fn event(&mut self, event: &Event) -> Result<(), KeepError> {
-        if let (Event::HandworkAsked(_), Some(stopper)) = (event, &self.1) {
+        let second =
+            |event: &Event| matches!(event, Event::HandworkAsked(work) if work.fit.is_some_and(|c| c.value > 200e-12));
+        if let (true, Some(stopper)) = (second(event), &self.1) {
             let stopper = stopper.clone();
             tokio::spawn(async move {
                 tokio::time::sleep(Duration::from_millis(100)).await;
@@ -293,6 +296,9 @@ async fn the_person_is_told_what_is_known_what_is_not_and_what_it_costs() {
     assert_eq!(ended.outcome, Outcome::Partial, "{:?}", ended.message);
     let outcome = ended.results.added_capacitors.as_ref().unwrap();
     assert!(outcome.relaxation.is_some(), "{outcome:?}");
+    assert!(
+        ended.run.journal.iter().all(|entry| !matches!(&entry.event, Event::Noted { note } if note.contains("fitted")))
+    );
     let first = ended.prompts[0].split_whitespace().collect::<Vec<_>>().join(" ");
     for part in [
         "Cautions:",
@@ -340,15 +346,18 @@ async fn a_bare_node_that_is_not_what_it_was_is_doubted() {
 #[tokio::test(flavor = "multi_thread")]
 async fn a_stop_while_the_person_is_asked_ends_the_run_with_everything_off() {
     let bench = Bench::start(8);
-    let ended = carry_out(&bench, "1 kV", Some(Manner::Absent), true).await;
+    let ended = carry_out(&bench, "1 kV", Some(Manner::GoesAway), true).await;
     assert_eq!(ended.outcome, Outcome::Stopped, "{:?}", ended.message);
     let entries = &ended.run.journal;
-    let asked = entries.iter().find(|entry| matches!(entry.event, Event::HandworkAsked(_))).unwrap();
+    let asked = entries.iter().rfind(|entry| matches!(entry.event, Event::HandworkAsked(_))).unwrap();
     let off =
         entries.iter().find(|entry| matches!(entry.event, Event::SafeOff { source_off: true, load_off: true, .. }));
     let after_s = off.unwrap().elapsed_s - asked.elapsed_s;
     assert!(after_s < 1.1, "off {after_s} s after it was asked, of which 0.1 s passed before the stop");
     assert_eq!(ended.results.points.len(), 1, "the bare point is kept");
+    let reminded =
+        |event: &&Event| matches!(event, Event::Noted { note } if note.contains("100.0 pF +- 0.6 pF is still fitted"));
+    assert!(events(&ended).iter().any(reminded), "a capacitor stays on the board");
 }
 
 #[tokio::test(flavor = "multi_thread")]
@@ -417,18 +426,66 @@ fn mistakes_in_the_plan_are_told_with_their_place() {
     }
 }
 
-/// Nobody solders at the other end of a pipe.
-#[test]
-fn the_built_program_refuses_without_a_terminal_before_anything_is_energised() {
-    let bench = Bench::start(11);
+/// Runs `measure` at a terminal and interrupts it there when the bulk voltage is asked for; prints exit code and all that was said.
+const AT_A_TERMINAL: &str = "
+import os, pty, sys
+pid, terminal = pty.fork()
+if pid == 0:
+    os.execv(sys.argv[1], sys.argv[1:])
+said, interrupted = b'', False
+while True:
+    try:
+        piece = os.read(terminal, 4096)
+    except OSError:
+        break
+    if not piece:
+        break
+    said += piece
+    if b'What does it show' in said and not interrupted:
+        os.write(terminal, b'\\x03')
+        interrupted = True
+print(os.waitstatus_to_exitcode(os.waitpid(pid, 0)[1]))
+print(said.decode())
+";
+
+fn write_inputs(bench: &Bench) {
     let inputs = bench.inputs(&plan_of_capacitors("1 kV"));
     let files = [("plan.toml", &inputs.plan), ("station.toml", &inputs.station), ("board.toml", &inputs.board)];
     for (name, text) in files {
         fs::write(bench.scratch.path().join(name), text).unwrap();
     }
+}
+
+const MEASURE: [&str; 7] = ["measure", "--plan", "plan.toml", "--station", "station.toml", "--board", "board.toml"];
+
+#[test]
+fn an_interrupt_at_the_terminal_ends_the_waiting_with_everything_off() {
+    if !need_python("pty") {
+        return;
+    }
+    let bench = Bench::start(12);
+    write_inputs(&bench);
+    let output = Command::new("python3")
+        .current_dir(bench.scratch.path())
+        .args(["-c", AT_A_TERMINAL, env!("CARGO_BIN_EXE_ringstep")])
+        .args(MEASURE)
+        .output()
+        .unwrap();
+    let said = String::from_utf8_lossy(&output.stdout);
+    assert!(said.starts_with("130\n"), "{said}");
+    assert!(said.contains("NOT KNOWN") && said.contains("source confirmed off, load confirmed off"), "{said}");
+    let states = bench.truths().into_iter().filter_map(|truth| truth.get("state").cloned());
+    assert_eq!(states.last().unwrap()["source_on"], false);
+}
+
+/// Nobody solders at the other end of a pipe.
+#[test]
+fn the_built_program_refuses_without_a_terminal_before_anything_is_energised() {
+    let bench = Bench::start(11);
+    write_inputs(&bench);
     let output = Command::new(env!("CARGO_BIN_EXE_ringstep"))
         .current_dir(bench.scratch.path())
-        .args(["measure", "--plan", "plan.toml", "--station", "station.toml", "--board", "board.toml"])
+        .args(MEASURE)
         .stdin(Stdio::null())
         .output()
         .unwrap();

@@ -1,7 +1,10 @@
 //! The journal as a list of sentences with their times.
 
 use super::text;
-use crate::{record::journal::Entry, sequence::event::Event};
+use crate::{
+    record::journal::Entry,
+    sequence::event::{AddedOutcome, Event},
+};
 use ringstep_analysis::quantity::Unit;
 
 /// One line of the timeline.
@@ -80,7 +83,7 @@ fn tell(event: &Event) -> (&'static str, String) {
         Event::AddedCapacitorRefused { capacitance_f, reason } => {
             ("refused", format!("Added capacitor of {} not measured: {reason}.", text::short(*capacitance_f, "F")))
         }
-        Event::AddedCapacitorsFinished(_) => ("point", "Inductance and capacitance from added capacitors.".to_owned()),
+        Event::AddedCapacitorsFinished(outcome) => ("point", added(outcome)),
         Event::Noted { note } => ("note", note.clone()),
         Event::SafeOff { reason, source_off, load_off } => {
             let confirmed = |off: &bool| if *off { "confirmed off" } else { "NOT confirmed off" };
@@ -88,4 +91,23 @@ fn tell(event: &Event) -> (&'static str, String) {
         }
         Event::RunEnded { message, .. } => ("end", message.clone().unwrap_or_else(|| "Run ended.".to_owned())),
     }
+}
+
+/// What the added capacitors say, in a sentence.
+fn added(outcome: &AddedOutcome) -> String {
+    let names = [("primary", &outcome.relaxation), ("leakage", &outcome.leakage)];
+    let values = names.iter().filter_map(|(name, result)| {
+        let result = result.as_ref()?;
+        Some(format!(
+            "{name} inductance {} with {}",
+            result.inductance_h.text_with_95_percent_interval(Unit::Henry),
+            result.node_capacitance_f.text_with_95_percent_interval(Unit::Farad)
+        ))
+    });
+    let doubts = names.iter().filter_map(|(_, result)| result.as_ref()).flat_map(|result| &result.doubts);
+    let sentences: Vec<String> = values
+        .chain(outcome.refusals.iter().cloned())
+        .chain(doubts.chain(&outcome.doubts).map(|doubt| doubt.sentence.trim_end_matches('.').to_owned()))
+        .collect();
+    format!("From added capacitors, without a nominal value: {}.", sentences.join("; "))
 }

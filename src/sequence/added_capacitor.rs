@@ -126,6 +126,7 @@ impl Bench<'_> {
         if let Err(called_off) = done(&work, operator).await {
             return Ok(Err(called_off));
         }
+        *self.fitted = work.fit;
         let capacitance_f = work.fit.map_or(0.0, |capacitance| capacitance.value);
         self.keeper.event(&Event::HandworkDone { capacitance_f, bulk_v })?;
         Ok(Ok(()))
