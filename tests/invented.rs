@@ -105,6 +105,7 @@ fn ring(frequency_hz: f64, decay: f64) -> Ring {
         decay_per_s: measured(decay, 0.01),
         quality_factor: measured(TAU * frequency_hz / (2.0 * decay), 0.01),
         amplitude_v: 100.0,
+        alternative_hz: None,
     }
 }
 
@@ -180,6 +181,10 @@ fn values(line_v: f64) -> PointValues {
         bulk_voltage_v: Some(measured(bulk_v, 0.002)),
         peak_drain_voltage_v: Some(measured(bulk_v + CLAMP_V, 0.01)),
         turn_on_rate_hz: Some(measured(21.3e3, 0.01)),
+        relaxation_amplitude_v: Some(96.0),
+        leakage_amplitude_v: Some(41.0),
+        budgets: Vec::new(),
+        capacitance_parts: Vec::new(),
     }
 }
 

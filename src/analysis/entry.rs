@@ -1,7 +1,8 @@
 //! The one entry: from samples to findings. What can't be observed is `None`, with a doubt that says why.
 
 use crate::{
-    circuit,
+    budget::Budget,
+    circuit::{CircuitValues, Observed, RingObservation},
     cycles::{RingWindow, Segment, Segmentation, segment},
     findings::{BoardFacts, CycleMode, Doubt, DoubtName, Findings, Ring, RingFit, RingKind, Subject},
     fit::{self, Accepted, Refusal, RingRecord, Times},
@@ -42,9 +43,9 @@ fn ring_down(samples: &Samples, facts: &BoardFacts) -> Findings {
         Some(window) => {
             let rings = fit_rings(&record, [window], RingKind::Relaxation, &mut findings);
             findings.relaxation_ring = fit::combine(&rings);
+            circuit_values(&rings, &[], facts, &mut findings);
         }
     }
-    capacitance(&mut findings, facts);
     findings
         .doubt(DoubtName::NoSwitchingCycles, "A bare ring-down has no switching cycles: the ring is reported alone.");
     findings
@@ -74,8 +75,7 @@ fn drain(samples: &Samples, facts: &BoardFacts) -> Findings {
     let leakage = fit_rings(&record, leakage, RingKind::Leakage, &mut findings);
     findings.leakage_ring = fit::combine(&leakage);
     absences(&segmentation, &mut findings);
-    capacitance(&mut findings, facts);
-    leakage_inductance(&mut findings);
+    circuit_values(&relaxation, &leakage, facts, &mut findings);
     findings.cycles = segmentation.segments.iter().map(|segment| segment.cycle).collect();
     findings
 }
@@ -117,13 +117,13 @@ fn fit_rings(
     kind: RingKind,
     findings: &mut Findings,
 ) -> Vec<Ring> {
-    let mut rings = Vec::new();
+    let mut rings: Vec<(Ring, f64)> = Vec::new();
     let mut refused: Vec<Doubt> = Vec::new();
     for window in windows {
         match fit::fit_ring(&record.part(window), kind) {
             Ok(Accepted { fit, ring, doubts }) => {
+                rings.push((ring, fit.level_v()));
                 findings.ring_fits.push(fit);
-                rings.push(ring);
                 doubts.into_iter().for_each(|doubt| findings.add(doubt));
             }
             Err(Refusal { doubt, rejected }) => {
@@ -135,7 +135,16 @@ fn fit_rings(
     if rings.is_empty() {
         refused.into_iter().for_each(|doubt| findings.add(doubt));
     }
-    rings
+    let joined = fit::join(&rings);
+    if !joined.left_out.is_empty() {
+        let sentence = format!(
+            "{} of {} rings do not lie with the others and were left out: look for a second operating state, or capture fewer cycles.",
+            joined.left_out.len(),
+            rings.len()
+        );
+        findings.doubt(DoubtName::RingsDisagree, &sentence);
+    }
+    joined.rings
 }
 
 fn rates(segmentation: &Segmentation, findings: &mut Findings) {
@@ -209,27 +218,40 @@ fn absences(segmentation: &Segmentation, findings: &mut Findings) {
     }
 }
 
-fn capacitance(findings: &mut Findings, facts: &BoardFacts) {
-    match (findings.relaxation_ring, facts.primary_inductance_h) {
-        (Some(ring), Some(inductance)) => {
-            findings.node_capacitance_f = Some(circuit::node_capacitance(&ring, inductance));
-        }
-        (Some(_), None) => findings.doubt(
+fn circuit_values(relaxation: &[Ring], leakage: &[Ring], facts: &BoardFacts, findings: &mut Findings) {
+    if relaxation.is_empty() {
+        return;
+    }
+    let observed = Observed {
+        relaxation: RingObservation::of(relaxation),
+        leakage: RingObservation::of(leakage),
+        bulk_voltage_v: findings.bulk_voltage_v,
+        reflected_voltage_v: findings.reflected_voltage_v,
+        release_v: findings.release_v(),
+    };
+    let values = CircuitValues::of(&observed, facts);
+    findings.node_capacitance_f = values.node_capacitance.as_ref().map(Budget::measured);
+    findings.leakage_inductance_h = values.leakage_inductance.as_ref().map(Budget::measured);
+    if facts.primary_inductance_h.is_none() {
+        findings.doubt(
             DoubtName::BoardFactMissing,
             "The primary inductance is not known, so the ring gives no capacitance: state it in the board file.",
-        ),
-        (None, _) => {}
-    }
-}
-
-fn leakage_inductance(findings: &mut Findings) {
-    if let (Some(ring), Some(node)) = (findings.leakage_ring, findings.node_capacitance_f) {
-        findings.leakage_inductance_h = Some(circuit::leakage_inductance_textbook(&ring, node));
+        );
+    } else if values.node_capacitance.is_none() {
         findings.doubt(
-            DoubtName::TextbookValue,
-            "The leakage inductance rests on the relaxation ring's capacitance; on the plateau the node has another.",
+            DoubtName::BoardFactMissing,
+            "No capacitance rings so with the snubber and the inductance stated: check both in the board file.",
         );
     }
+    if values.textbook {
+        findings.doubt(
+            DoubtName::TextbookValue,
+            "The leakage inductance rests on the relaxation ring's capacitance; on the plateau the node has another: state the \
+             transistor's output capacitance and each secondary's rectifier and snubber capacitance in the board file, or measure with \
+             an added capacitor.",
+        );
+    }
+    findings.budgets = values.budgets();
 }
 
 impl Findings {

@@ -1,7 +1,7 @@
 //! What one analysis found, as plain data: rings, circuit values, cycles and doubts. Absent values are `None`, and a
 //! doubt says why.
 
-use crate::quantity::Measured;
+use crate::{budget::Budget, pieces::NodePieces, quantity::Measured};
 use serde::{Deserialize, Serialize};
 
 /// What the analysis may know about the board and the probe; all SI. Everything is optional: less is found without it.
@@ -13,8 +13,32 @@ pub struct BoardFacts {
     pub probe_capacitance_f: Option<Measured>,
     /// Nominal switching period, or the one learnt at a heavier load, in seconds: the unit in which gaps are counted.
     pub switching_period_s: Option<f64>,
+    /// The parts on the drain node, as far as they are stated.
+    #[serde(default)]
+    pub pieces: NodePieces,
+    /// How far the instruments can be trusted.
+    #[serde(default)]
+    pub accuracy: Accuracy,
     /// Whether the controller leaves out cycles (`false`: it folds its frequency back); `None` where it is not known.
     pub skips_cycles: Option<bool>,
+}
+
+/// Relative half-widths within which the scales of the measurement lie.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct Accuracy {
+    /// The scope's time base.
+    pub time_base: f64,
+    /// The scope's vertical gain.
+    pub vertical_gain: f64,
+    /// The probe's attenuation.
+    pub probe_factor: f64,
+}
+
+impl Default for Accuracy {
+    /// What most scopes and probes keep (common practice); a station file may state better.
+    fn default() -> Self {
+        Self { time_base: 50e-6, vertical_gain: 0.03, probe_factor: 0.02 }
+    }
 }
 
 /// How a recording is to be read.
@@ -48,10 +72,20 @@ pub struct Findings {
     pub turn_on_rate_hz: Option<Measured>,
     /// Peak-to-peak of the cycle period over the mean is not enough to say: every cycle as it was classified.
     pub cycles: Vec<Cycle>,
+    /// Uncertainty budget of every circuit value and voltage.
+    #[serde(default)]
+    pub budgets: Vec<Budget>,
     /// Every ring that was fitted, accepted or not: what the report draws.
     pub ring_fits: Vec<RingFit>,
     /// Typed reasons to trust a value less, or not at all.
     pub doubts: Vec<Doubt>,
+}
+
+impl Findings {
+    /// Highest drain voltage above the bulk voltage: where a clamp limits it, the clamp's level.
+    pub fn release_v(&self) -> Option<f64> {
+        Some(self.peak_drain_voltage_v?.value - self.bulk_voltage_v?.value)
+    }
 }
 
 /// Parameters of a ring.
@@ -69,6 +103,10 @@ pub struct Ring {
     /// swings.
     #[serde(default)]
     pub amplitude_v: f64,
+    /// Undamped frequency by a model with a free capacitance law, where the ring's own has none: many rings together may tell what
+    /// one cannot.
+    #[serde(default)]
+    pub alternative_hz: Option<Measured>,
 }
 
 /// One switching cycle: from a turn-on to the next.
@@ -143,6 +181,11 @@ impl RingFit {
     /// Names of the parameters, in order.
     pub const PARAMETERS: [&'static str; 6] =
         ["amplitude_v", "decay_per_s", "damped_frequency_hz", "phase_rad", "offset_v", "slope_v_per_s"];
+
+    /// Level that the ring stands on in the middle of its window, in volts: of a relaxation ring the bulk voltage.
+    pub fn level_v(&self) -> f64 {
+        self.parameters[4] + 0.5 * self.parameters[5] * (self.end_s - self.start_s)
+    }
 
     /// The model at `t_s` seconds after [`RingFit::start_s`], in volts.
     pub fn model_v(&self, t_s: f64) -> f64 {
@@ -228,6 +271,8 @@ pub enum DoubtName {
     BoardFactMissing,
     /// A textbook relation was used where the node's capacitance at the plateau is not known.
     TextbookValue,
+    /// Rings of one record do not lie together.
+    RingsDisagree,
     /// The mean of the record drifts.
     Drifting,
     /// Simulated or played-back data.

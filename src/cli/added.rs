@@ -53,7 +53,7 @@ pub(crate) struct AddedAnswer {
 
 impl AddedArgs {
     /// Puts the recordings together; `records` begins with the bare one.
-    pub(crate) fn answer(&self, records: Vec<AddedRecord>, subject: Subject) -> AddedAnswer {
+    pub(crate) fn answer(&self, records: Vec<AddedRecord>, subject: Subject, facts: &BoardFacts) -> AddedAnswer {
         let kinds: &[RingKind] = match subject {
             Subject::Drain => &[RingKind::Relaxation, RingKind::Leakage],
             Subject::RingDown => &[RingKind::Relaxation],
@@ -71,17 +71,18 @@ impl AddedArgs {
                     )),
                 }
             }
-            (kind, added_capacitors(&points, &self.options(kind)).map_err(|refusal| refusal.to_string()))
+            (kind, added_capacitors(&points, &self.options(kind, facts)).map_err(|refusal| refusal.to_string()))
         });
         let rings = rings.collect();
         AddedAnswer { records, rings, missing }
     }
 
-    fn options(&self, kind: RingKind) -> AddedOptions {
+    fn options(&self, kind: RingKind, facts: &BoardFacts) -> AddedOptions {
         let usual = AddedOptions::default();
         AddedOptions {
             lead_stray_f: self.lead_stray.unwrap_or(usual.lead_stray_f),
             common_meter: self.meter_tolerance.map_or(usual.common_meter, |meter| meter.standard_uncertainty),
+            time_base: Measured::within(1.0, facts.accuracy.time_base).standard_uncertainty,
             frequency_slope_hz_per_v: self.relaxation_slope.filter(|_| kind == RingKind::Relaxation),
             ..usual
         }

@@ -18,6 +18,7 @@ pub(super) struct Announcement {
     pub(super) probe_factor: f64,
     pub(super) probe_capacitance_f: f64,
     pub(super) documents: Documents,
+    pub(super) data_sheets: DataSheets,
     pub(super) primary_inductance_reading_h: f64,
 }
 
@@ -35,6 +36,16 @@ pub(super) struct Documents {
     pub(super) clamp: String,
     pub(super) clamp_v: f64,
     pub(super) controller: String,
+}
+
+/// What the data sheets of its parts state: points of volts and farad, relative tolerance.
+#[derive(Debug, Clone, Deserialize)]
+pub(super) struct DataSheets {
+    pub(super) output_capacitance: Vec<[f64; 2]>,
+    pub(super) clamp_diode: Vec<[f64; 2]>,
+    pub(super) rectifier_f: f64,
+    pub(super) secondary_f: f64,
+    pub(super) tolerance: f64,
 }
 
 /// A running bench; it ends when this is dropped.

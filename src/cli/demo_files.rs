@@ -75,7 +75,7 @@ load_power = "100 W"
 
 /// The board as its documents state it, with the primary inductance measured on this very sample.
 pub(super) fn board(bench: &Announcement) -> String {
-    let documents = &bench.documents;
+    let (documents, sheets) = (&bench.documents, &bench.data_sheets);
     let output_v = documents.output_v;
     format!(
         r#"format = "ringstep board 1"
@@ -91,6 +91,10 @@ line_range = ["{low_v} V", "{high_v} V"]
 [clamp]
 kind = "{clamp}"
 voltage = "{clamp_v} V"
+diode_capacitance = {clamp_diode}
+
+[transistor]
+output_capacitance = {output_capacitance}
 
 [[output]]
 name = "{output_v} V"
@@ -100,6 +104,8 @@ maximum_load = "{maximum_a} A"
 minimum_load = "{minimum_a} A"
 turns_ratio = {turns_ratio}
 rectifier = "schottky"
+rectifier_capacitance = "{rectifier_pf:.1} pF +- {tolerance:.1} %"
+snubber_capacitance = "{secondary_pf:.1} pF +- {tolerance:.1} %"
 "#,
         name = bench.board,
         inductance_uh = bench.primary_inductance_reading_h * 1e6,
@@ -116,5 +122,18 @@ rectifier = "schottky"
         maximum_a = documents.maximum_load_a,
         minimum_a = documents.minimum_load_a,
         turns_ratio = documents.turns_ratio,
+        clamp_diode = curve(&sheets.clamp_diode, sheets.tolerance),
+        output_capacitance = curve(&sheets.output_capacitance, sheets.tolerance),
+        rectifier_pf = sheets.rectifier_f * 1e12,
+        secondary_pf = sheets.secondary_f * 1e12,
+        tolerance = 100.0 * sheets.tolerance,
     )
+}
+
+/// A data-sheet curve as a board file states it.
+fn curve(points: &[[f64; 2]], tolerance: f64) -> String {
+    let list = |texts: Vec<String>| texts.join(", ");
+    let volts = list(points.iter().map(|[v, _]| format!("\"{v:.3} V\"")).collect());
+    let farads = list(points.iter().map(|[_, f]| format!("\"{:.3} pF\"", f * 1e12)).collect());
+    format!("{{ voltages = [{volts}], capacitances = [{farads}], tolerance = \"{:.1} %\" }}", 100.0 * tolerance)
 }

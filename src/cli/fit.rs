@@ -89,7 +89,7 @@ impl Fit {
             let findings = analyse(&self.recording(&added.file)?.samples, subject, facts);
             records.push(AddedRecord { added: added.clone(), findings });
         }
-        Ok(Some(self.added.answer(records, subject)))
+        Ok(Some(self.added.answer(records, subject, facts)))
     }
 
     fn facts(&self) -> Result<BoardFacts, CliError> {

@@ -76,7 +76,7 @@ impl Bench<'_> {
         }
         let again = self.bare_again(bare, operator).await?;
         whole &= again.is_some();
-        let outcome = outcome(added, [bare.load_a, self.job.plan.load_start_a], bare, points, again);
+        let outcome = outcome(&self.options(added), [bare.load_a, self.job.plan.load_start_a], bare, points, again);
         let told = outcome.relaxation.is_some();
         self.keeper.event(&Event::AddedCapacitorsFinished(outcome))?;
         Ok(whole && told)
@@ -106,6 +106,16 @@ impl Bench<'_> {
             turn_on_energy_j,
             turn_on_rate_hz,
             power_w: turn_on_energy_j * turn_on_rate_hz,
+        }
+    }
+
+    /// What the points have in common.
+    fn options(&self, added: &AddedCapacitors) -> AddedOptions {
+        AddedOptions {
+            lead_stray_f: added.lead_stray_f,
+            common_meter: added.common_meter,
+            time_base: Measured::within(1.0, self.facts.accuracy.time_base).standard_uncertainty,
+            ..AddedOptions::default()
         }
     }
 
@@ -287,7 +297,7 @@ async fn answer(prompt: &str, operator: &dyn Operator) -> Result<String, CalledO
 /// The lines through all points, and whether the bare node stayed what it was; `loads_a` are the measuring load and the load
 /// start.
 fn outcome(
-    added: &AddedCapacitors,
+    options: &AddedOptions,
     loads_a: [f64; 2],
     bare: &Point,
     mut nodes: Vec<Node>,
@@ -303,12 +313,12 @@ fn outcome(
     }
     nodes.extend(again);
     let relaxation_hz = |node: &Node| node.relaxation_hz;
-    match line(added, &nodes, relaxation_hz) {
+    match line(options, &nodes, relaxation_hz) {
         Ok(result) => outcome.relaxation = Some(result),
         Err(refusal) => outcome.refusals.push(format!("relaxation ring: {refusal}")),
     }
     outcome.doubts.extend(bare_moved("relaxation", &nodes, relaxation_hz));
-    let lines = [0, 1].map(|load| line(added, &nodes, |node| node.leakage_hz[load]));
+    let lines = [0, 1].map(|load| line(options, &nodes, |node| node.leakage_hz[load]));
     let uncertainty =
         |load: &usize| lines[*load].as_ref().map_or(f64::INFINITY, |r| r.inductance_h.relative_uncertainty());
     let load = usize::from(uncertainty(&1) < uncertainty(&0));
@@ -324,7 +334,7 @@ fn outcome(
 }
 
 fn line(
-    added: &AddedCapacitors,
+    options: &AddedOptions,
     nodes: &[Node],
     frequency_hz: impl Fn(&Node) -> Option<Measured>,
 ) -> Result<AddedResult, String> {
@@ -336,9 +346,7 @@ fn line(
             reflected_voltage_v: node.reflected_v,
         })
     });
-    let (lead_stray_f, common_meter) = (added.lead_stray_f, added.common_meter);
-    let options = AddedOptions { lead_stray_f, common_meter, ..AddedOptions::default() };
-    added_capacitors(&points.collect::<Vec<_>>(), &options).map_err(|refusal| refusal.to_string())
+    added_capacitors(&points.collect::<Vec<_>>(), options).map_err(|refusal| refusal.to_string())
 }
 
 /// A doubt where the bare node, first and last of all, rings at another frequency than before by more than chance.

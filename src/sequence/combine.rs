@@ -2,7 +2,8 @@
 
 use super::{event::PointValues, survey::Survey};
 use ringstep_analysis::{
-    circuit,
+    budget::Budget,
+    circuit::{CircuitValues, Observed, RingObservation},
     findings::{BoardFacts, Findings, Ring},
     fit,
     quantity::Measured,
@@ -18,55 +19,70 @@ pub(super) struct Captured<'a> {
 
 /// Puts the captures of one point together.
 pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValues {
-    let relaxation = ring(captured.relaxation, |findings| findings.relaxation_ring);
-    let (leakage, leakage_captures) = leakage_ring(captured).unzip();
-    let node = relaxation.zip(facts.primary_inductance_h).map(|(ring, l)| circuit::node_capacitance(&ring, l));
+    let relaxation = rings(captured.relaxation, |findings| findings.relaxation_ring);
+    let (leakage, leakage_set) = leakage_rings(captured).unwrap_or_default();
+    let releases: Vec<f64> = leakage_set.iter().filter_map(|(_, findings)| findings.release_v()).collect();
+    let observed = Observed {
+        relaxation: RingObservation::of(&relaxation),
+        leakage: RingObservation::of(&leakage),
+        bulk_voltage_v: mean(captured.relaxation, |findings| findings.bulk_voltage_v),
+        reflected_voltage_v: mean(captured.relaxation, |findings| findings.reflected_voltage_v),
+        release_v: (!releases.is_empty()).then(|| releases.iter().sum::<f64>() / releases.len() as f64),
+    };
+    let values = CircuitValues::of(&observed, facts);
+    let (relaxation, leakage) = (fit::combine(&relaxation), fit::combine(&leakage));
     let both = || captured.relaxation.iter().chain(captured.leakage);
     let peaks = both().filter_map(|(_, findings)| findings.peak_drain_voltage_v);
+    let of = |budget: &Option<Budget>| budget.as_ref().map(Budget::measured);
     PointValues {
-        leakage_captures: leakage_captures.unwrap_or_default(),
-        relaxation_frequency_hz: relaxation.map(|ring| ring.frequency_hz),
+        leakage_captures: leakage_set.iter().map(|(number, _)| *number).collect(),
+        relaxation_frequency_hz: observed.relaxation.map(|ring| ring.measured()),
         relaxation_quality_factor: relaxation.map(|ring| ring.quality_factor),
-        leakage_frequency_hz: leakage.map(|ring| ring.frequency_hz),
+        relaxation_amplitude_v: relaxation.map(|ring| ring.amplitude_v),
+        leakage_frequency_hz: observed.leakage.map(|ring| ring.measured()),
         leakage_quality_factor: leakage.map(|ring| ring.quality_factor),
-        node_capacitance_f: node,
-        node_capacitance_without_probe_f: node.zip(facts.probe_capacitance_f).map(|(node, probe)| less(node, probe)),
-        leakage_inductance_h: leakage.zip(node).map(|(ring, node)| circuit::leakage_inductance_textbook(&ring, node)),
-        reflected_voltage_v: mean(captured.relaxation, |findings| findings.reflected_voltage_v),
-        bulk_voltage_v: mean(captured.relaxation, |findings| findings.bulk_voltage_v),
+        leakage_amplitude_v: leakage.map(|ring| ring.amplitude_v),
+        node_capacitance_f: of(&values.node_capacitance),
+        node_capacitance_without_probe_f: of(&values.node_capacitance_without_probe),
+        leakage_inductance_h: of(&values.leakage_inductance),
+        reflected_voltage_v: of(&values.reflected_voltage),
+        bulk_voltage_v: of(&values.bulk_voltage),
         peak_drain_voltage_v: peaks.reduce(|a, b| if b.value > a.value { b } else { a }),
         turn_on_rate_hz: captured.survey.findings.turn_on_rate_hz,
+        budgets: values.budgets(),
+        capacitance_parts: values.capacitance_parts,
     }
 }
 
 /// Leakage-ring frequencies at the measuring load and at the load start, apart: they differ, for the ring is larger at one.
 pub(super) fn leakage_frequencies(captured: &Captured<'_>) -> [Option<Measured>; 2] {
-    let frequency = |set| ring(set, |findings| findings.leakage_ring).map(|ring| ring.frequency_hz);
-    [frequency(captured.relaxation), frequency(captured.leakage)]
+    let frequency =
+        |set| RingObservation::of(&rings(set, |findings| findings.leakage_ring)).map(|ring| ring.measured());
+    [captured.relaxation, captured.leakage].map(frequency)
 }
 
-/// The leakage ring with the captures it is taken from, at the load where it is known best: at the load start it is large, but
-/// the clamp may conduct again on later crests; at the measuring load it is clean, but small.
-fn leakage_ring(captured: &Captured<'_>) -> Option<(Ring, Vec<usize>)> {
+/// The leakage rings with the captures they are taken from, at the load where they are known best: at the load start they are large,
+/// but the clamp may conduct again on later crests; at the measuring load they are clean, but small.
+fn leakage_rings<'a>(captured: &Captured<'a>) -> Option<(Vec<Ring>, &'a [(usize, Findings)])> {
     let sets = [captured.relaxation, captured.leakage].into_iter();
-    let rings = sets.filter_map(|set| Some((ring(set, |findings| findings.leakage_ring)?, set)));
-    let best = rings.min_by(|(a, _), (b, _)| {
-        a.frequency_hz.relative_uncertainty().total_cmp(&b.frequency_hz.relative_uncertainty())
+    let known = sets.filter_map(|set| {
+        let rings = rings(set, |findings| findings.leakage_ring);
+        let uncertainty = fit::combine(&rings)?.frequency_hz.relative_uncertainty();
+        Some((uncertainty, rings, set))
     });
-    best.map(|(ring, set)| (ring, set.iter().map(|(number, _)| *number).collect()))
+    let (_, rings, set) = known.min_by(|a, b| a.0.total_cmp(&b.0))?;
+    Some((rings, set))
 }
 
-fn ring(findings: &[(usize, Findings)], pick: fn(&Findings) -> Option<Ring>) -> Option<Ring> {
-    fit::combine(&findings.iter().filter_map(|(_, findings)| pick(findings)).collect::<Vec<_>>())
+/// The rings of the captures, brought to one bulk voltage.
+fn rings(findings: &[(usize, Findings)], pick: fn(&Findings) -> Option<Ring>) -> Vec<Ring> {
+    let rings = findings.iter().filter_map(|(_, findings)| {
+        let bulk_v = findings.bulk_voltage_v.map_or(0.0, |bulk| bulk.value);
+        Some((pick(findings)?, bulk_v))
+    });
+    fit::join(&rings.collect::<Vec<_>>()).rings
 }
 
 fn mean(findings: &[(usize, Findings)], pick: fn(&Findings) -> Option<Measured>) -> Option<Measured> {
     fit::weighted_mean(findings.iter().filter_map(|(_, findings)| pick(findings)))
-}
-
-fn less(whole: Measured, part: Measured) -> Measured {
-    Measured {
-        value: whole.value - part.value,
-        standard_uncertainty: whole.standard_uncertainty.hypot(part.standard_uncertainty),
-    }
 }

@@ -2,7 +2,11 @@
 
 use crate::instrument::{Identity, LoadReading, RawWaveform, SourceReading};
 use ringstep_analysis::{
-    circuit::added::{AddedDoubt, AddedResult},
+    budget::Budget,
+    circuit::{
+        CapacitancePart,
+        added::{AddedDoubt, AddedResult},
+    },
     findings::Findings,
     quantity::Measured,
 };
@@ -228,6 +232,18 @@ pub struct PointValues {
     pub peak_drain_voltage_v: Option<Measured>,
     /// Turn-on rate in the survey at the measuring load.
     pub turn_on_rate_hz: Option<Measured>,
+    /// Amplitude in volts at which the quality factor of the relaxation ring holds: at the start of its window.
+    #[serde(default)]
+    pub relaxation_amplitude_v: Option<f64>,
+    /// The same of the leakage ring.
+    #[serde(default)]
+    pub leakage_amplitude_v: Option<f64>,
+    /// Uncertainty budget of every circuit value and voltage.
+    #[serde(default)]
+    pub budgets: Vec<Budget>,
+    /// The node capacitance taken apart, as far as the board file states its parts.
+    #[serde(default)]
+    pub capacitance_parts: Vec<CapacitancePart>,
 }
 
 /// What is known of the charge on the board after power was taken off.

@@ -2,7 +2,7 @@
 //! standard output; it ends with its standard input, on which a hand with a soldering iron may be asked for meanwhile.
 
 use crate::{
-    boards::{self, ClampKind, ControllerKind, Nominal},
+    boards::{self, ClampKind, ControllerKind, DataSheets, Nominal},
     faults::{Fault, FaultPlan, InstrumentName},
     instruments::{
         Device, Instrument, SharedBench,
@@ -118,6 +118,8 @@ pub struct Announcement {
     pub probe_capacitance_f: f64,
     /// What the documents of the board state.
     pub documents: Nominal,
+    /// What the data sheets of its parts state.
+    pub data_sheets: DataSheets,
     /// Primary self-inductance of this very sample as an inductance meter shows it, within 0.5 %.
     pub primary_inductance_reading_h: f64,
 }
@@ -221,6 +223,7 @@ pub async fn start(options: &Options) -> Result<RunningBench, BenchError> {
         probe_factor: options.probe_factor,
         probe_capacitance_f: options.probe_capacitance_f,
         documents: board.nominal,
+        data_sheets: DataSheets::of(board),
         primary_inductance_reading_h: inductance_reading(&bench, seed),
     };
     bench.now().note_state();

@@ -1,9 +1,10 @@
 //! A board as its file states it: nominal values, outputs, ratings. SI units.
 
-use super::Station;
+use super::{Station, parts};
 use crate::files::{Document, FileErrors, Table, Value};
 use ringstep_analysis::{
     findings::BoardFacts,
+    pieces::{CapacitanceLaw, NodePieces, NodeSnubber, SecondaryPiece},
     quantity::{Measured, Unit},
 };
 
@@ -31,6 +32,12 @@ pub struct Board {
     pub line_range_v: [f64; 2],
     /// Nominal switching frequency, where known.
     pub switching_frequency_hz: Option<f64>,
+    /// Output capacitance of the transistor, where known.
+    pub transistor_capacitance: Option<CapacitanceLaw>,
+    /// Junction capacitance of the clamp's diode, where known.
+    pub clamp_diode_capacitance: Option<CapacitanceLaw>,
+    /// Resistor and capacitor in series across the drain node, where there is one.
+    pub drain_snubber: Option<NodeSnubber>,
 }
 
 /// One output.
@@ -50,6 +57,10 @@ pub struct Output {
     pub turns_ratio: f64,
     /// Rectifier.
     pub rectifier: Rectifier,
+    /// Junction capacitance of the rectifier at the output voltage, where known.
+    pub rectifier_capacitance_f: Option<Measured>,
+    /// Snubber capacitance across the rectifier; exactly zero for none.
+    pub snubber_capacitance_f: Measured,
 }
 
 impl Output {
@@ -155,7 +166,11 @@ impl Board {
 
     /// What the analysis may know of this board on that station.
     pub fn facts(&self, station: &Station) -> BoardFacts {
-        BoardFacts { probe_capacitance_f: Some(station.probe.capacitance_f), ..self.own_facts() }
+        BoardFacts {
+            probe_capacitance_f: Some(station.probe.capacitance_f),
+            accuracy: station.accuracy,
+            ..self.own_facts()
+        }
     }
 
     /// What the analysis may know of this board where no station is at hand.
@@ -168,7 +183,25 @@ impl Board {
                 Controller::FrequencyFoldback => Some(false),
                 Controller::QuasiResonant | Controller::Unknown => None,
             },
+            pieces: self.pieces(),
             ..BoardFacts::default()
+        }
+    }
+
+    fn pieces(&self) -> NodePieces {
+        let secondary = |output: &Output| {
+            Some(SecondaryPiece {
+                turns_ratio: output.turns_ratio,
+                rectifier_f: output.rectifier_capacitance_f?,
+                snubber_f: output.snubber_capacitance_f,
+            })
+        };
+        NodePieces {
+            transistor: self.transistor_capacitance.clone(),
+            secondaries: self.outputs.iter().map(secondary).collect(),
+            clamp_diode: self.clamp_diode_capacitance.clone(),
+            clamp_v: self.clamp_v,
+            snubber: self.drain_snubber,
         }
     }
 
@@ -196,8 +229,15 @@ impl Board {
         let clamp = root.required("clamp", |value| value.table().and_then(|table| clamp_from_table(&table)));
         let outputs = root
             .required("output", |value| value.list(|value| value.table().and_then(|table| Output::from_table(&table))));
+        let transistor = root.optional("transistor", |value| {
+            let table = value.table()?;
+            let law = table.required("output_capacitance", |value| parts::law(&value.table()?));
+            table.finish();
+            law
+        });
+        let drain_snubber = root.optional("drain_snubber", parts::snubber);
         root.finish();
-        let (clamp, clamp_v) = clamp?;
+        let (clamp, clamp_v, clamp_diode_capacitance) = clamp?;
         Some(Self {
             name: name?,
             primary_inductance_h: primary_inductance_h?,
@@ -209,18 +249,22 @@ impl Board {
             drain_rating_v: drain_rating_v?,
             line_range_v: line_range_v?,
             switching_frequency_hz: switching_frequency_hz?,
+            transistor_capacitance: transistor?,
+            clamp_diode_capacitance,
+            drain_snubber: drain_snubber?,
         })
     }
 }
 
-fn clamp_from_table(table: &Table<'_, '_>) -> Option<(Clamp, Option<f64>)> {
+fn clamp_from_table(table: &Table<'_, '_>) -> Option<(Clamp, Option<f64>, Option<CapacitanceLaw>)> {
     let kind = table.required("kind", |value| value.choice(&Clamp::WORDS));
     let voltage_v = table.optional("voltage", |value| value.quantity(Unit::Volt, 1.0..=5e3));
+    let diode = table.optional("diode_capacitance", |value| parts::law(&value.table()?));
     if kind == Some(Clamp::None) && table.has("voltage") {
         table.refuse("voltage", "a level without a clamp", "leave it out, or state the kind of clamp");
     }
     table.finish();
-    Some((kind?, voltage_v?))
+    Some((kind?, voltage_v?, diode?))
 }
 
 impl Output {
@@ -233,6 +277,10 @@ impl Output {
         let minimum_load_a = table.required("minimum_load", |value| value.quantity(Unit::Ampere, 0.0..=1e3));
         let turns_ratio = table.required("turns_ratio", |value| value.number(0.01..=1e3));
         let rectifier = table.required("rectifier", |value| value.choice(&Rectifier::WORDS));
+        let rectifier_capacitance_f =
+            table.optional("rectifier_capacitance", |value| value.measured(Unit::Farad, 0.0..=1e-6));
+        let snubber_capacitance_f =
+            table.optional("snubber_capacitance", |value| value.measured(Unit::Farad, 0.0..=1e-6));
         if let (Some(voltage), Some([low, high])) = (voltage_v, regulation_v)
             && !(low..=high).contains(&voltage)
         {
@@ -254,6 +302,8 @@ impl Output {
             minimum_load_a: minimum_load_a?,
             turns_ratio: turns_ratio?,
             rectifier: rectifier?,
+            rectifier_capacitance_f: rectifier_capacitance_f?,
+            snubber_capacitance_f: snubber_capacitance_f?.unwrap_or(Measured::exact(0.0)),
         })
     }
 }

@@ -1,7 +1,10 @@
 //! A station as its file states it: instruments, probe, earthing, safety limits. SI units.
 
 use crate::files::{Document, FileErrors, Table, Value};
-use ringstep_analysis::quantity::{Measured, Unit};
+use ringstep_analysis::{
+    findings::Accuracy,
+    quantity::{Measured, Unit},
+};
 
 /// A station. Its file looks like this:
 #[doc = concat!("```toml\n", include_str!("../guide/examples/station.toml"), "```")]
@@ -23,6 +26,8 @@ pub struct Station {
     pub probe: Probe,
     /// Safety limits.
     pub limits: SafetyLimits,
+    /// How far scope and probe can be trusted.
+    pub accuracy: Accuracy,
 }
 
 /// The scope's role.
@@ -109,10 +114,13 @@ impl Station {
         let root = document.root();
         document.format(&root, "station", Self::FORMAT);
         let name = root.required("name", Value::text);
-        let scope = root.required("scope", |value| value.table().and_then(|table| ScopeRole::from_table(&table)));
+        let mut accuracy = Accuracy::default();
+        let scope = root
+            .required("scope", |value| value.table().and_then(|table| ScopeRole::from_table(&table, &mut accuracy)));
         let load = root.required("load", |value| value.table().and_then(|table| with_flag(&table, "earthed")));
         let source = root.required("source", |value| value.table().and_then(|table| with_flag(&table, "isolated")));
-        let probe = root.required("probe", |value| value.table().and_then(|table| Probe::from_table(&table)));
+        let probe =
+            root.required("probe", |value| value.table().and_then(|table| Probe::from_table(&table, &mut accuracy)));
         let limits = root.required("limits", |value| value.table().and_then(|table| SafetyLimits::from_table(&table)));
         root.finish();
         let ((load, load_earthed), (source, source_isolated)) = (load?, source?);
@@ -125,8 +133,17 @@ impl Station {
             source_isolated,
             probe: probe?,
             limits: limits?,
+            accuracy,
         })
     }
+}
+
+/// A relative half-width that a file may state: taken over where it does.
+fn state(table: &Table<'_, '_>, key: &'static str, into: &mut f64) -> Option<()> {
+    if let Some(stated) = table.optional(key, |value| value.quantity(Unit::Percent, 0.0..=0.5))? {
+        *into = stated;
+    }
+    Some(())
 }
 
 /// The role of a load or a source with the one thing to know about its earthing.
@@ -164,19 +181,24 @@ impl Role {
 }
 
 impl ScopeRole {
-    fn from_table(table: &Table<'_, '_>) -> Option<Self> {
+    fn from_table(table: &Table<'_, '_>, accuracy: &mut Accuracy) -> Option<Self> {
         let role = Role::from_table(table, false);
+        let time_base = state(table, "time_base_accuracy", &mut accuracy.time_base);
+        let vertical = state(table, "vertical_accuracy", &mut accuracy.vertical_gain);
         let channel = table.required("channel", |value| value.count(1..=8));
         let earthed = table.required("earthed", Value::boolean);
         let input_rating_v = table.required("input_rating", |value| value.quantity(Unit::Volt, 1.0..=1e3));
         table.finish();
         let channel = u8::try_from(channel?).ok()?;
+        time_base?;
+        vertical?;
         Some(Self { role: role?, channel, earthed: earthed?, input_rating_v: input_rating_v? })
     }
 }
 
 impl Probe {
-    fn from_table(table: &Table<'_, '_>) -> Option<Self> {
+    fn from_table(table: &Table<'_, '_>, accuracy: &mut Accuracy) -> Option<Self> {
+        let factor_accuracy = state(table, "factor_accuracy", &mut accuracy.probe_factor);
         let factor = table.required("factor", |value| value.number(1.0..=10_000.0));
         let capacitance_f = table.required("capacitance", |value| value.measured(Unit::Farad, 0.0..=1e-9));
         let bandwidth_hz = table.required("bandwidth", |value| value.quantity(Unit::Hertz, 1e5..=1e11));
@@ -188,6 +210,7 @@ impl Probe {
         let calibrated = table.optional("calibrated", Value::date);
         let compensated = table.optional("compensated", Value::date);
         table.finish();
+        factor_accuracy?;
         Some(Self {
             factor: factor?,
             capacitance_f: capacitance_f?,

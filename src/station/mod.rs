@@ -5,6 +5,7 @@ mod by_hand;
 mod cautions;
 mod config;
 mod connect;
+mod parts;
 mod safe_off;
 
 pub use board::*;

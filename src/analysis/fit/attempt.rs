@@ -4,7 +4,7 @@ use super::{
     RingRecord, Times,
     curves::{Floor, Line},
     damped_sinusoid::{Base, fit_damped_sinusoid},
-    evidence::{Described, Model, described, first_floor},
+    evidence::{Described, Model, alternative, described, first_floor},
     least_squares::project,
     report,
     series::Series,
@@ -61,10 +61,14 @@ impl<'a> Tried<'a> {
     /// The same with everything the samples ask for beyond a damped sinusoid.
     pub(super) fn described(self) -> Self {
         let best = described(self.plain.clone(), &self.series);
-        if best.model == self.plain.model {
-            return self;
-        }
-        finish(&self.record, self.fit.kind, self.series.clone(), self.plain.clone(), best).unwrap_or(self)
+        let alternative = alternative(&best, &self.series);
+        let alternative_hz = alternative.map(|model| report::ring(&self.series, &model).frequency_hz);
+        let mut tried = match best.model == self.plain.model {
+            true => self,
+            false => finish(&self.record, self.fit.kind, self.series.clone(), self.plain.clone(), best).unwrap_or(self),
+        };
+        tried.ring.alternative_hz = alternative_hz;
+        tried
     }
 }
 

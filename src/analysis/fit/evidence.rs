@@ -169,6 +169,15 @@ fn better(best: &Described, series: &Series) -> Option<Described> {
     })
 }
 
+/// The same with a free capacitance law of two degrees, where the model has none: what many rings together may ask for. `None` where it
+/// has one, or none can be fitted.
+pub(super) fn alternative(best: &Described, series: &Series) -> Option<Described> {
+    let Model::Ringing(floor) = best.model else { return None };
+    let about = best.solution.nonlinear[1];
+    let model = Model::Circuit(CircuitEquation { degree: 2, core_loss: false, floor, about });
+    Described::by(model, series, &best.towards(model))
+}
+
 /// The models that have a little more, each with what it must explain.
 fn larger(best: &Described) -> Vec<(Model, f64)> {
     let (model, about) = (best.model, best.solution.nonlinear[1]);

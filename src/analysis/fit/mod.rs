@@ -8,6 +8,7 @@ mod curves;
 mod damped_sinusoid;
 mod drawing;
 mod evidence;
+mod joint;
 pub mod least_squares;
 mod moments;
 mod noise;
@@ -20,6 +21,7 @@ mod window;
 
 pub use damped_sinusoid::{Base, DampedSinusoid, fit_damped_sinusoid};
 pub use drawing::curve_v;
+pub use joint::{Joined, join};
 pub use ring::{combine, ring_of, weighted_mean};
 pub use window::find_ring_down;
 

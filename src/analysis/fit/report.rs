@@ -56,6 +56,7 @@ pub(super) fn ring(series: &Series, best: &Described) -> Ring {
         decay_per_s: propagated(decay / span, 1.0 / span, 0.0),
         quality_factor: propagated(quality, (u_by.0 - undamped / decay) / (2.0 * decay), u_by.1 / (2.0 * decay)),
         amplitude_v,
+        alternative_hz: None,
     }
 }
 

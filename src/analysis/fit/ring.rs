@@ -34,6 +34,7 @@ pub fn ring_of(fit: &RingFit) -> Ring {
             TAU * damped / (undamped * 2.0 * decay),
         ),
         amplitude_v: fit.parameters[0],
+        alternative_hz: None,
     }
 }
 
@@ -41,11 +42,13 @@ pub fn ring_of(fit: &RingFit) -> Ring {
 /// uncertainties say, the uncertainty is widened to what the scatter says (the Birge ratio). `None` for no rings.
 pub fn combine(rings: &[Ring]) -> Option<Ring> {
     let of = |pick: fn(&Ring) -> Measured| weighted_mean(rings.iter().map(pick));
+    let any = rings.iter().any(|ring| ring.alternative_hz.is_some());
     Some(Ring {
         frequency_hz: of(|ring| ring.frequency_hz)?,
         damped_frequency_hz: of(|ring| ring.damped_frequency_hz)?,
         decay_per_s: of(|ring| ring.decay_per_s)?,
         quality_factor: of(|ring| ring.quality_factor)?,
+        alternative_hz: any.then(|| of(|ring| ring.alternative_hz.unwrap_or(ring.frequency_hz))).flatten(),
         amplitude_v: rings.iter().map(|ring| ring.amplitude_v).sum::<f64>() / rings.len() as f64,
     })
 }

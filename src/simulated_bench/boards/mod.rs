@@ -1,11 +1,13 @@
 //! The boards that ship with the bench, invented for the Norrsund Harbour Works. Fixed: a board is never softened to suit a
 //! measurement.
 
+mod data_sheets;
 mod parts;
 mod ringing;
 mod short;
 mod silent;
 
+pub use data_sheets::DataSheets;
 pub use parts::{Clamp, ClampLevel, ControllerParts, Diode, LightLoad, Parts};
 use serde::Serialize;
 

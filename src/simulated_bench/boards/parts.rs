@@ -147,6 +147,9 @@ pub enum LightLoad {
     },
 }
 
+/// Tolerance of the capacitances on the drain node, relative.
+pub(super) const PART_TOLERANCE: f64 = 0.08;
+
 impl Parts {
     /// These parts as one specimen holds them: each value drawn uniformly within its tolerance.
     pub fn specimen(&self, inductance_tolerance: f64, seed: u64) -> Self {
@@ -158,13 +161,13 @@ impl Parts {
         parts.winding_ohm *= spread(0.05);
         parts.leakage_loss_ohm *= spread(0.1);
         parts.core_ohm *= spread(0.1);
-        parts.winding_f *= spread(0.08);
-        parts.transistor = parts.transistor.scaled(spread(0.08));
+        parts.winding_f *= spread(PART_TOLERANCE);
+        parts.transistor = parts.transistor.scaled(spread(PART_TOLERANCE));
         parts.on_ohm *= spread(0.1);
-        parts.clamp.diode.junction = parts.clamp.diode.junction.scaled(spread(0.08));
-        parts.rectifier.junction = parts.rectifier.junction.scaled(spread(0.08));
+        parts.clamp.diode.junction = parts.clamp.diode.junction.scaled(spread(PART_TOLERANCE));
+        parts.rectifier.junction = parts.rectifier.junction.scaled(spread(PART_TOLERANCE));
         parts.rectifier.drop_v *= spread(0.04);
-        parts.secondary_f *= spread(0.08);
+        parts.secondary_f *= spread(PART_TOLERANCE);
         parts.output_f *= spread(0.1);
         parts.bulk_f *= spread(0.1);
         parts.clamp.level = match parts.clamp.level {
