@@ -1,6 +1,8 @@
 //! Integration tests: one module a subject.
 #![allow(clippy::unwrap_used, missing_docs, unreachable_pub)]
 
+mod added;
+mod added_run;
 mod by_hand;
 mod cli;
 mod dialects;

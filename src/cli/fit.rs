@@ -1,6 +1,7 @@
 //! `fit`: the analysis of a run, on a recording from a file.
 
 use super::{
+    added::{Added, AddedAnswer, AddedArgs, AddedRecord},
     error::{CliError, Exit},
     findings,
     inputs::{read_bytes, read_text},
@@ -11,15 +12,16 @@ use clap::Args;
 use ringstep::station::Board;
 use ringstep_analysis::{
     analyse,
-    findings::{BoardFacts, Subject},
+    findings::{BoardFacts, Findings, Subject},
     quantity::{Measured, Unit, parse_quantity},
 };
-use std::path::PathBuf;
+use std::path::{Path, PathBuf};
 
 /// Analyse a recording: rings, capacitance, leakage, stress, each with its uncertainty.
 ///
 /// FILE is delimited text (a time column, or start and interval in the header or by options) or a NumPy array file
-/// (.npy, with --interval). Nothing is measured and nothing energised.
+/// (.npy, with --interval). With --added, the same node recorded with known capacitors gives inductance and capacitance
+/// without any nominal value. Nothing is measured and nothing energised.
 #[derive(Debug, Args)]
 pub(crate) struct Fit {
     /// The recording.
@@ -35,6 +37,8 @@ pub(crate) struct Fit {
     ring_down: bool,
     #[command(flatten)]
     recording: RecordingOptions,
+    #[command(flatten)]
+    added: AddedArgs,
     /// Print one JSON object with SI values.
     #[arg(long)]
     pub(crate) json: bool,
@@ -44,17 +48,48 @@ impl Fit {
     /// Runs the command.
     pub(crate) fn run(&self) -> Result<Exit, CliError> {
         let facts = self.facts()?;
-        let recording = Recording::decode(&self.file, &read_bytes(&self.file)?, &self.recording)?;
         let subject = if self.ring_down { Subject::RingDown } else { Subject::Drain };
+        let recording = self.recording(&self.file)?;
         let findings = analyse(&recording.samples, subject, &facts);
+        let added = self.with_added(&findings, subject, &facts)?;
         if self.json {
-            output::json(&findings::to_json(&findings));
+            let mut json = findings::to_json(&findings);
+            if let Some(added) = &added {
+                json["added_capacitors"] = added.to_json();
+            }
+            output::json(&json);
         } else {
             output::line(&recording.describe());
             output::line(&findings::describe(&findings, subject));
+            if let Some(added) = &added {
+                output::line(&added.describe(&findings, &facts, subject));
+            }
         }
         let measured = findings.relaxation_ring.is_some() || findings.leakage_ring.is_some();
         Ok(if measured { Exit::Done } else { Exit::NothingMeasurable })
+    }
+
+    fn recording(&self, file: &Path) -> Result<Recording, CliError> {
+        Recording::decode(file, &read_bytes(file)?, &self.recording)
+    }
+
+    /// The recordings with added capacitors, read alike, together with the bare one.
+    fn with_added(
+        &self,
+        bare: &Findings,
+        subject: Subject,
+        facts: &BoardFacts,
+    ) -> Result<Option<AddedAnswer>, CliError> {
+        if self.added.added.is_empty() {
+            return Ok(None);
+        }
+        let nothing = Added { capacitance_f: Measured::exact(0.0), file: self.file.clone() };
+        let mut records = vec![AddedRecord { added: nothing, findings: bare.clone() }];
+        for added in &self.added.added {
+            let findings = analyse(&self.recording(&added.file)?.samples, subject, facts);
+            records.push(AddedRecord { added: added.clone(), findings });
+        }
+        Ok(Some(self.added.answer(records, subject, facts)))
     }
 
     fn facts(&self) -> Result<BoardFacts, CliError> {

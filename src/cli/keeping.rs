@@ -11,7 +11,7 @@ use ringstep::{
     },
     transport::{ExchangeEntry, ExchangeSink},
 };
-use ringstep_analysis::quantity::Unit;
+use ringstep_analysis::quantity::{Measured, Unit};
 use std::{
     io::IsTerminal,
     sync::atomic::{AtomicBool, Ordering},
@@ -155,6 +155,25 @@ fn sentence(event: &Event) -> Option<(String, bool)> {
             };
             Some((format!("  capture {}: {purpose}", capture.number), false))
         }
+        Event::AddedPointFinished(point) => {
+            let text = |value: Option<Measured>| {
+                value.map_or_else(|| "not given".to_owned(), |value| value.text_with_standard_uncertainty(Unit::Hertz))
+            };
+            let (relaxation, leakage) = (point.values.relaxation_frequency_hz, point.values.leakage_frequency_hz);
+            kept(format!(
+                "  with {}: relaxation ring {}, leakage ring {}",
+                point.capacitance_f.text_with_standard_uncertainty(Unit::Farad),
+                text(relaxation),
+                text(leakage)
+            ))
+        }
+        Event::AddedCapacitorRefused { capacitance_f, reason } => {
+            let farad = Measured::exact(*capacitance_f).text_with_standard_uncertainty(Unit::Farad);
+            kept(format!("  added capacitor of {farad}: not measured: {reason}"))
+        }
+        Event::AddedCapacitorsFinished(outcome) => kept(super::added::outcome(outcome)),
+        // What is asked of the operator is told by the prompt.
+        Event::Discharge(_) | Event::HandworkAsked(_) | Event::HandworkDone { .. } => None,
         Event::RunStarted { .. } | Event::PreflightChecked { .. } | Event::RunEnded { .. } => None,
     }
 }

@@ -24,6 +24,7 @@ use ringstep::{
 };
 use serde_json::json;
 use std::{
+    io::IsTerminal,
     path::{Path, PathBuf},
     sync::Arc,
     time::Duration,
@@ -60,7 +61,9 @@ impl Measure {
     pub(crate) fn run(&self) -> Result<Exit, CliError> {
         let inputs = self.paths.read()?;
         let folder = self.out.clone().unwrap_or_else(|| default_folder(&inputs.board.name));
-        let attendance = if self.unattended { Attendance::Unattended } else { Attendance::Attended };
+        // Nobody solders at the other end of a pipe.
+        let by_hand = inputs.plan.added_capacitors.is_some() && !std::io::stdin().is_terminal();
+        let attendance = if self.unattended || by_hand { Attendance::Unattended } else { Attendance::Attended };
         let request = Request { folder, drivers: self.drivers.as_deref(), attendance, quiet: self.json };
         let finished = execute(&inputs, &request)?;
         finished.print(self.json);

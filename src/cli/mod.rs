@@ -1,5 +1,6 @@
 //! The command line: one command a file, and the way from arguments to an exit code.
 
+mod added;
 mod bench_process;
 mod check;
 mod demo;

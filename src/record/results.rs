@@ -3,7 +3,7 @@
 
 use crate::{
     instrument::Identity,
-    sequence::event::{Event, Outcome, Point, PointValues},
+    sequence::event::{AddedOutcome, Event, Outcome, Point, PointValues},
 };
 use ringstep_analysis::{findings::Doubt, quantity::Measured};
 use serde::{Deserialize, Serialize};
@@ -33,6 +33,9 @@ pub struct Results {
     pub points: Vec<PointResult>,
     /// Points that could not be measured.
     pub refused: Vec<Refusal>,
+    /// What added capacitors say, where the plan had some.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub added_capacitors: Option<AddedOutcome>,
 }
 
 /// One measured point.
@@ -87,6 +90,7 @@ pub fn from_events<'a>(events: impl IntoIterator<Item = &'a Event>) -> Results {
         instruments: Vec::new(),
         points: Vec::new(),
         refused: Vec::new(),
+        added_capacitors: None,
     };
     for event in events {
         match event {
@@ -103,6 +107,7 @@ pub fn from_events<'a>(events: impl IntoIterator<Item = &'a Event>) -> Results {
             Event::PointRefused { index, line_v, reason } => {
                 results.refused.push(Refusal { index: *index, line_v: *line_v, reason: reason.clone() });
             }
+            Event::AddedCapacitorsFinished(outcome) => results.added_capacitors = Some(outcome.clone()),
             Event::RunEnded { outcome, message } => {
                 results.outcome = Some(*outcome);
                 results.message.clone_from(message);

@@ -1,7 +1,11 @@
 //! The journal as a list of sentences with their times.
 
 use super::text;
-use crate::{record::journal::Entry, sequence::event::Event};
+use crate::{
+    record::journal::Entry,
+    sequence::event::{AddedOutcome, Event},
+};
+use ringstep_analysis::quantity::Unit;
 
 /// One line of the timeline.
 #[derive(Debug)]
@@ -57,6 +61,29 @@ fn tell(event: &Event) -> (&'static str, String) {
         Event::PointRefused { line_v, reason, .. } => {
             ("refused", format!("Point at {} line refused: {reason}", text::short(*line_v, "V")))
         }
+        Event::Discharge(discharge) => {
+            let bulk = discharge.bulk_v.map_or("not known".to_owned(), |bulk_v| text::short(bulk_v, "V"));
+            let output = text::short(discharge.output_v, "V");
+            ("by hand", format!("Power taken off; bulk voltage {bulk}, output at {output}."))
+        }
+        Event::HandworkAsked(work) => {
+            let what = work.fit.map_or("removal of the capacitor".to_owned(), |capacitance| {
+                format!("fitting of {}", capacitance.text_with_standard_uncertainty(Unit::Farad))
+            });
+            ("by hand", format!("Asked for: {what}."))
+        }
+        Event::HandworkDone { capacitance_f, bulk_v } => {
+            let (fitted, bulk) = (text::short(*capacitance_f, "F"), text::short(*bulk_v, "V"));
+            ("by hand", format!("Confirmed: {fitted} fitted; bulk capacitor measured by hand at {bulk}."))
+        }
+        Event::AddedPointFinished(point) => {
+            let farad = point.capacitance_f.text_with_standard_uncertainty(Unit::Farad);
+            ("point", format!("Point at {} line with {farad} added finished.", text::short(point.line_v, "V")))
+        }
+        Event::AddedCapacitorRefused { capacitance_f, reason } => {
+            ("refused", format!("Added capacitor of {} not measured: {reason}.", text::short(*capacitance_f, "F")))
+        }
+        Event::AddedCapacitorsFinished(outcome) => ("point", added(outcome)),
         Event::Noted { note } => ("note", note.clone()),
         Event::SafeOff { reason, source_off, load_off } => {
             let confirmed = |off: &bool| if *off { "confirmed off" } else { "NOT confirmed off" };
@@ -64,4 +91,23 @@ fn tell(event: &Event) -> (&'static str, String) {
         }
         Event::RunEnded { message, .. } => ("end", message.clone().unwrap_or_else(|| "Run ended.".to_owned())),
     }
+}
+
+/// What the added capacitors say, in a sentence.
+fn added(outcome: &AddedOutcome) -> String {
+    let names = [("primary", &outcome.relaxation), ("leakage", &outcome.leakage)];
+    let values = names.iter().filter_map(|(name, result)| {
+        let result = result.as_ref()?;
+        Some(format!(
+            "{name} inductance {} with {}",
+            result.inductance_h.text_with_95_percent_interval(Unit::Henry),
+            result.node_capacitance_f.text_with_95_percent_interval(Unit::Farad)
+        ))
+    });
+    let doubts = names.iter().filter_map(|(_, result)| result.as_ref()).flat_map(|result| &result.doubts);
+    let sentences: Vec<String> = values
+        .chain(outcome.refusals.iter().cloned())
+        .chain(doubts.chain(&outcome.doubts).map(|doubt| doubt.sentence.trim_end_matches('.').to_owned()))
+        .collect();
+    format!("From added capacitors, without a nominal value: {}.", sentences.join("; "))
 }

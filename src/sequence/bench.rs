@@ -5,6 +5,7 @@ use crate::instrument::{Load, LoadReading, Scope, Source, SourceReading, Vertica
 use ringstep_analysis::{
     analyse,
     findings::{BoardFacts, Findings, Subject},
+    quantity::Measured,
     waveform::Samples,
 };
 
@@ -17,6 +18,8 @@ pub(super) struct Bench<'a> {
     pub(super) keeper: &'a mut dyn Keeper,
     /// What the analysis may know; the switching period is learnt on the way where the board file does not state it.
     pub(super) facts: BoardFacts,
+    /// Capacitor that was last confirmed to be fitted to the drain node; outlives the run's own end, so that it can be told.
+    pub(super) fitted: &'a mut Option<Measured>,
     /// Index of the point being measured.
     pub(super) point: usize,
     /// Line voltage set.

@@ -54,6 +54,13 @@ pub(super) fn combine(captured: &Captured<'_>, facts: &BoardFacts) -> PointValue
     }
 }
 
+/// Leakage-ring frequencies at the measuring load and at the load start, apart: they differ, for the ring is larger at one.
+pub(super) fn leakage_frequencies(captured: &Captured<'_>) -> [Option<Measured>; 2] {
+    let frequency =
+        |set| RingObservation::of(&rings(set, |findings| findings.leakage_ring)).map(|ring| ring.measured());
+    [captured.relaxation, captured.leakage].map(frequency)
+}
+
 /// The leakage rings with the captures they are taken from, at the load where they are known best: at the load start they are large,
 /// but the clamp may conduct again on later crests; at the measuring load they are clean, but small.
 fn leakage_rings<'a>(captured: &Captured<'a>) -> Option<(Vec<Ring>, &'a [(usize, Findings)])> {

@@ -60,7 +60,7 @@ impl Bench<'_> {
     }
 
     /// Draws a current, waits for the output and takes a survey there.
-    async fn survey_at(&mut self, current_a: f64) -> Result<(Survey, LoadReading), RunError> {
+    pub(super) async fn survey_at(&mut self, current_a: f64) -> Result<(Survey, LoadReading), RunError> {
         self.draw(current_a).await?;
         let load = self.settle_output().await?;
         let survey = self.survey().await?;

@@ -111,6 +111,12 @@ pub enum RunError {
     /// The program itself is at fault; safe-off is reached all the same.
     #[error("a defect of the program ended the run ({0}); please report it with the run folder")]
     Defect(String),
+    /// The plan has something done by hand, and nobody can be asked.
+    #[error(
+        "the plan adds capacitors by hand, and nobody attends the run: nothing was energised; take added_capacitors out of the \
+         plan, or attend the run at a terminal"
+    )]
+    Unattended,
     /// The operator stopped the run.
     #[error("stopped by the operator")]
     Stopped,

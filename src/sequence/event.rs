@@ -1,7 +1,15 @@
 //! What happens in a run, as plain data. The journal is these events, one JSON line each.
 
 use crate::instrument::{Identity, LoadReading, RawWaveform, SourceReading};
-use ringstep_analysis::{budget::Budget, circuit::CapacitancePart, findings::Findings, quantity::Measured};
+use ringstep_analysis::{
+    budget::Budget,
+    circuit::{
+        CapacitancePart,
+        added::{AddedDoubt, AddedResult},
+    },
+    findings::Findings,
+    quantity::Measured,
+};
 use serde::{Deserialize, Serialize};
 
 /// One event of a run. Newer versions add variants and optional fields; they never change the meaning of old ones.
@@ -66,6 +74,28 @@ pub enum Event {
         /// Why, and what to change.
         reason: String,
     },
+    /// Power was taken off for work by hand: what is known of the charge that stays.
+    Discharge(Discharge),
+    /// The operator was asked to fit a capacitor to the drain node, or to take it off.
+    HandworkAsked(Handwork),
+    /// The operator confirmed it.
+    HandworkDone {
+        /// Capacitance fitted now, without leads; zero for the bare node.
+        capacitance_f: f64,
+        /// Voltage the operator measured at the bulk capacitor before touching anything.
+        bulk_v: f64,
+    },
+    /// The rings with one capacitor added, or with none again, are on disk.
+    AddedPointFinished(AddedPointValues),
+    /// A capacitor was not fitted, or the work with them ended early.
+    AddedCapacitorRefused {
+        /// Its capacitance.
+        capacitance_f: f64,
+        /// Why, and what to change.
+        reason: String,
+    },
+    /// What all the added capacitors say together.
+    AddedCapacitorsFinished(AddedOutcome),
     /// Something worth telling that stops nothing.
     Noted {
         /// One sentence.
@@ -214,4 +244,84 @@ pub struct PointValues {
     /// The node capacitance taken apart, as far as the board file states its parts.
     #[serde(default)]
     pub capacitance_parts: Vec<CapacitancePart>,
+}
+
+/// What is known of the charge on the board after power was taken off.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Discharge {
+    /// Whether the source read back that its output is off; otherwise the operator said so.
+    pub source_read_back: bool,
+    /// What the source reads then.
+    pub source: Option<SourceReading>,
+    /// Whether the load read back that its input is off.
+    pub load_read_back: bool,
+    /// Output voltage that the load sees.
+    pub output_v: f64,
+    /// Bulk voltage; `None` where no instrument of the station sees it, so that it is not known.
+    pub bulk_v: Option<f64>,
+}
+
+/// Work asked of the operator, with what it will do to the board.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct Handwork {
+    /// Capacitance to be fitted; `None` where the last one is to be taken off.
+    pub fit: Option<Measured>,
+    /// What is predicted with it.
+    pub predicted: Option<AddedStress>,
+}
+
+/// What an added capacitor must stand and what it costs.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct AddedStress {
+    /// Highest drain voltage: that measured without it.
+    pub peak_v: f64,
+    /// Rating needed: the peak and the margin.
+    pub needed_rating_v: f64,
+    /// Rating it has.
+    pub rating_v: f64,
+    /// Highest drain voltage from which the switch may discharge it: bulk and reflected voltage.
+    pub turn_on_v: f64,
+    /// Energy the switch turns into heat at a turn-on from there, `C V^2 / 2`, in joule.
+    pub turn_on_energy_j: f64,
+    /// Highest rate of turn-ons to reckon with.
+    pub turn_on_rate_hz: f64,
+    /// Both together, in watt.
+    pub power_w: f64,
+}
+
+/// Values of the node with one capacitor added.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct AddedPointValues {
+    /// Capacitance added, without leads; zero for the bare node, measured again.
+    pub capacitance_f: Measured,
+    /// Line voltage set.
+    pub line_v: f64,
+    /// Load current at which the relaxation rings were captured.
+    pub load_a: f64,
+    /// Leakage-ring frequencies at the measuring load and at the load start.
+    pub leakage_frequencies_hz: [Option<Measured>; 2],
+    /// Values; the node capacitance from the nominal inductance has the capacitor in it.
+    pub values: PointValues,
+    /// Findings of each capture, by capture number.
+    pub findings: Vec<(usize, Findings)>,
+}
+
+/// What the added capacitors say together; `None` with a refusal where they say nothing.
+#[derive(Debug, Clone, Default, PartialEq, Serialize, Deserialize)]
+pub struct AddedOutcome {
+    /// Index of the point that was measured bare, from zero.
+    pub point: usize,
+    /// Line voltage set.
+    pub line_v: f64,
+    /// Primary inductance and node capacitance, probe included.
+    pub relaxation: Option<AddedResult>,
+    /// Leakage inductance and node capacitance on the plateau, probe included.
+    pub leakage: Option<AddedResult>,
+    /// Load current at which the leakage rings behind it were captured: the measuring load or the load start, for all points the
+    /// same, whichever tells it better.
+    pub leakage_load_a: Option<f64>,
+    /// Why one of them is missing, a sentence each.
+    pub refusals: Vec<String>,
+    /// Doubts about the whole.
+    pub doubts: Vec<AddedDoubt>,
 }

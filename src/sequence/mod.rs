@@ -4,6 +4,8 @@
 //! operator stops it.
 
 mod acquire;
+mod added_capacitor;
+mod added_plan;
 mod bench;
 mod combine;
 mod descent;
@@ -20,6 +22,7 @@ mod settle;
 mod stop;
 mod survey;
 
+pub use added_plan::{AddedCapacitors, AddedPart};
 pub use error::RunError;
 pub use keeper::{KeepError, Keeper};
 pub use plan::*;

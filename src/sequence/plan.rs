@@ -1,5 +1,6 @@
 //! A plan as its file states it: what to measure. SI units.
 
+use super::AddedCapacitors;
 use crate::files::{Document, FileErrors, Table, Value};
 use ringstep_analysis::quantity::Unit;
 
@@ -27,6 +28,8 @@ pub struct Plan {
     pub settle_timeout_s: f64,
     /// What the peak drain voltage is reckoned with before anything is switched on.
     pub stress: StressEstimate,
+    /// Capacitors to be added to the drain node after the bare points.
+    pub added_capacitors: Option<AddedCapacitors>,
 }
 
 /// Assumptions of the peak drain voltage estimate.
@@ -79,6 +82,9 @@ impl Plan {
         let captures = root.required("captures", |value| value.table().and_then(|table| captures_from_table(&table)));
         let stress =
             root.optional("stress", |value| value.table().and_then(|table| StressEstimate::from_table(&table)));
+        let added_capacitors = root.optional("added_capacitors", |value| {
+            value.table().and_then(|table| AddedCapacitors::from_table(&table, line_v.as_deref()))
+        });
         root.finish();
         let ([load_start_a, load_floor_a], (relaxation_captures, leakage_captures, ring_periods)) = (load?, captures?);
         Some(Self {
@@ -92,6 +98,7 @@ impl Plan {
             ring_periods,
             settle_timeout_s: settle_timeout_s?,
             stress: stress?.unwrap_or_default(),
+            added_capacitors: added_capacitors?,
         })
     }
 }

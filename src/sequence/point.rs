@@ -3,19 +3,26 @@
 use super::{
     RunError,
     bench::Bench,
-    combine::{Captured, combine},
+    combine::{Captured, combine, leakage_frequencies},
     descent::{Descent, Stepped},
     event::{Event, Point},
     survey::Survey,
 };
-use ringstep_analysis::findings::Findings;
+use ringstep_analysis::{findings::Findings, quantity::Measured};
+
+/// A point that was measured, with what its event does not tell.
+pub(super) struct MeasuredPoint {
+    pub(super) point: Point,
+    /// At the measuring load and at the load start.
+    pub(super) leakage_frequencies_hz: [Option<Measured>; 2],
+}
 
 /// Relative movement of the line that counts as a change of it.
 const SAME_LINE: f64 = 1e-9;
 
 impl Bench<'_> {
-    /// Measures one point; `false` where it had to be refused.
-    pub(super) async fn measure_point(&mut self, index: usize, line_v: f64) -> Result<bool, RunError> {
+    /// Measures one point; `None` where it had to be refused.
+    pub(super) async fn measure_point(&mut self, index: usize, line_v: f64) -> Result<Option<MeasuredPoint>, RunError> {
         self.point = index;
         self.set_line(line_v).await?;
         self.draw(self.job.plan.load_start_a).await?;
@@ -27,22 +34,26 @@ impl Bench<'_> {
             Stepped::Visible(descent) => self.finish_point(*descent, leakage).await,
             Stepped::Refused(reason) => {
                 self.keeper.event(&Event::PointRefused { index, line_v, reason })?;
-                Ok(false)
+                Ok(None)
             }
         }
     }
 
-    async fn finish_point(&mut self, descent: Descent, leakage: Vec<(usize, Findings)>) -> Result<bool, RunError> {
+    async fn finish_point(
+        &mut self,
+        descent: Descent,
+        leakage: Vec<(usize, Findings)>,
+    ) -> Result<Option<MeasuredPoint>, RunError> {
         let (index, line_v) = (self.point, self.line_v);
         let relaxation = self.relaxation_rings(&descent.survey).await?;
         let captured = Captured { survey: &descent.survey, relaxation: &relaxation, leakage: &leakage };
-        let values = combine(&captured, &self.facts);
+        let (values, leakage_frequencies_hz) = (combine(&captured, &self.facts), leakage_frequencies(&captured));
         let measured = values.relaxation_frequency_hz.is_some();
         if !measured {
             let reason = doubts_of(&relaxation);
             let reason = format!("none of {} captures held a relaxation ring that fits. {reason}", relaxation.len());
             self.keeper.event(&Event::PointRefused { index, line_v, reason })?;
-            return Ok(false);
+            return Ok(None);
         }
         let findings = leakage.into_iter().chain(relaxation).chain([(descent.survey.number, descent.survey.findings)]);
         let point = Point {
@@ -54,12 +65,12 @@ impl Bench<'_> {
             values,
             findings: findings.collect(),
         };
-        self.keeper.event(&Event::PointFinished(point))?;
-        Ok(true)
+        self.keeper.event(&Event::PointFinished(point.clone()))?;
+        Ok(Some(MeasuredPoint { point, leakage_frequencies_hz }))
     }
 
     /// Brings the line to a voltage with the load off while nothing is energised yet, or as it stands afterwards.
-    async fn set_line(&mut self, line_v: f64) -> Result<(), RunError> {
+    pub(super) async fn set_line(&mut self, line_v: f64) -> Result<(), RunError> {
         let frequency_hz = self.job.plan.line_frequency_hz;
         let energised = self.line_v > 0.0;
         if energised && (line_v - self.line_v).abs() <= SAME_LINE * line_v {

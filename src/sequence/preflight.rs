@@ -17,7 +17,7 @@ pub struct PreflightCheck {
 }
 
 impl PreflightCheck {
-    fn hold(check: &'static str, holds: bool, detail: String) -> Self {
+    pub(super) fn hold(check: &'static str, holds: bool, detail: String) -> Self {
         Self { check, passed: holds, noted: false, detail }
     }
 
@@ -44,6 +44,10 @@ pub fn preflight(station: &Station, board: &Board, plan: &Plan, attendance: Atte
     match expected_stress(board, plan) {
         Ok(stress) => checks.extend(stress_checks(station, board, plan, &stress)),
         Err(reason) => checks.push(PreflightCheck::hold("peak drain voltage", false, reason)),
+    }
+    if let Some(added) = &plan.added_capacitors {
+        let peak_v = expected_stress(board, plan).ok().map(|stress| stress.peak_v());
+        checks.extend(added.checks(peak_v, attendance));
     }
     checks.push(probe_bandwidth(station, plan));
     checks.extend(probe_dates(station));

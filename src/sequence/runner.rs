@@ -8,6 +8,7 @@ use super::{
 };
 use crate::station::{Board, Connected, Station};
 use futures_util::FutureExt;
+use ringstep_analysis::quantity::{Measured, Unit};
 use std::{any::Any, panic::AssertUnwindSafe};
 
 /// What a run is to do, on which station, with which board.
@@ -42,10 +43,11 @@ pub async fn run(
     keeper: &mut dyn Keeper,
     stop: &Stop,
 ) -> Result<(Outcome, Option<String>), RunError> {
+    let mut fitted = None;
     let ended = tokio::select! {
         biased;
         () = stop.raised() => Err(RunError::Stopped),
-        ended = AssertUnwindSafe(points(job, connected, keeper)).catch_unwind() => {
+        ended = AssertUnwindSafe(points(job, connected, keeper, &mut fitted)).catch_unwind() => {
             ended.unwrap_or_else(|panic| Err(RunError::Defect(panicked(panic.as_ref()))))
         }
     };
@@ -62,8 +64,15 @@ pub async fn run(
     };
     let reason = message.clone().unwrap_or_else(|| "finished".into());
     let (source_off, load_off) = (off.source.is_confirmed(), off.load.is_confirmed());
-    let kept = keeper
-        .event(&Event::SafeOff { reason, source_off, load_off })
+    let reminder = fitted.map(|capacitance: Measured| Event::Noted {
+        note: format!(
+            "{} is still fitted to the drain node; take it off, power off and the bulk capacitor measured below 60 V",
+            capacitance.text_with_standard_uncertainty(Unit::Farad)
+        ),
+    });
+    let kept = reminder
+        .map_or(Ok(()), |reminder| keeper.event(&reminder))
+        .and_then(|()| keeper.event(&Event::SafeOff { reason, source_off, load_off }))
         .and_then(|()| keeper.event(&Event::RunEnded { outcome, message: message.clone() }));
     // The record can't tell any more, so the error must.
     kept.map_err(|error| RunError::Unrecorded { error, outputs: outputs(source_off, load_off) })?;
@@ -86,13 +95,25 @@ fn panicked(panic: &(dyn Any + Send)) -> String {
 }
 
 /// Measures every point; returns how many were measured and how many refused.
-async fn points(job: &Job, connected: &mut Connected, keeper: &mut dyn Keeper) -> Result<(usize, usize), RunError> {
+///
+/// The added capacitors of the plan count as one more.
+async fn points(
+    job: &Job,
+    connected: &mut Connected,
+    keeper: &mut dyn Keeper,
+    fitted: &mut Option<Measured>,
+) -> Result<(usize, usize), RunError> {
+    let operator = connected.operator.clone();
+    if job.plan.added_capacitors.is_some() && operator.is_none() {
+        return Err(RunError::Unattended);
+    }
     let mut bench = Bench {
         job,
         scope: &mut *connected.scope,
         load: &mut *connected.load,
         source: &mut *connected.source,
         keeper,
+        fitted,
         facts: job.board.facts(&job.station),
         point: 0,
         line_v: 0.0,
@@ -102,11 +123,16 @@ async fn points(job: &Job, connected: &mut Connected, keeper: &mut dyn Keeper) -
         survey_window_s: None,
     };
     bench.prepare().await?;
-    let mut measured = 0;
+    let mut measured = Vec::new();
     for (index, line_v) in job.plan.line_v.iter().enumerate() {
-        measured += usize::from(bench.measure_point(index, *line_v).await?);
+        measured.extend(bench.measure_point(index, *line_v).await?);
     }
-    Ok((measured, job.plan.line_v.len() - measured))
+    let (mut done, mut wanted) = (measured.len(), job.plan.line_v.len());
+    if let (Some(added), Some(operator)) = (&job.plan.added_capacitors, operator) {
+        wanted += 1;
+        done += usize::from(bench.add_capacitors(added, &measured, &*operator).await?);
+    }
+    Ok((done, wanted - done))
 }
 
 impl Bench<'_> {

@@ -1,5 +1,5 @@
 //! The bench as a process: instruments around one board on sockets and a pseudo-terminal, announced by one JSON line on the
-//! standard output; it ends with its standard input.
+//! standard output; it ends with its standard input, on which a hand with a soldering iron may be asked for meanwhile.
 
 use crate::{
     boards::{self, ClampKind, ControllerKind, DataSheets, Nominal},
@@ -19,7 +19,7 @@ use crate::{
 };
 use serde::Serialize;
 use std::{
-    io::{self, Read, Write},
+    io::{self, Write},
     path::PathBuf,
     sync::{Arc, Mutex},
     time::Duration,
@@ -240,7 +240,9 @@ pub async fn start(options: &Options) -> Result<RunningBench, BenchError> {
     Ok(RunningBench { announcement, bench, _tasks: tasks })
 }
 
-/// Starts a bench, announces it in one JSON line on the standard output, and keeps it until the standard input ends.
+/// Starts a bench, announces it in one JSON line on the standard output, and keeps it until the standard input ends. A line
+/// `solder 47e-12` there adds that capacitance from drain to source, `solder 0` takes it away; each is answered by a JSON line
+/// that tells whether it was done, which it is not while the line is on.
 ///
 /// # Errors
 /// As `start`, or if the standard output is closed.
@@ -249,13 +251,23 @@ pub async fn serve(options: &Options) -> Result<(), BenchError> {
     let line = serde_json::to_string(&running.announcement).map_err(io::Error::other);
     let mut out = io::stdout();
     line.and_then(|line| writeln!(out, "{line}")).and_then(|()| out.flush()).map_err(failed("announce itself"))?;
+    let hand = running.bench.clone();
     // The end of the standard input tells that the parent is gone, however it went.
     let (ended, end) = oneshot::channel();
     std::thread::spawn(move || {
-        let mut byte = [0];
-        while matches!(io::stdin().read(&mut byte), Ok(read) if read > 0) {}
+        for line in io::stdin().lines() {
+            let Ok(line) = line else { break };
+            let done = solder(&hand, &line);
+            // Whoever does not read the answer does without.
+            let _ = writeln!(io::stdout(), "{}", serde_json::json!({"asked": line, "done": done}));
+        }
         let _ = ended.send(());
     });
     let _ = end.await;
     Ok(())
+}
+
+fn solder(bench: &SharedBench, line: &str) -> bool {
+    let farad = line.trim().strip_prefix("solder ").and_then(|farad| farad.trim().parse().ok());
+    farad.is_some_and(|farad| bench.now().solder(farad))
 }

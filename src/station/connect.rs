@@ -22,6 +22,8 @@ pub struct Connected {
     pub source: Box<dyn Source>,
     /// Switches source and load off, whatever happened; stays of use after the roles are gone.
     pub safe_off: SafeOff,
+    /// Whoever attends the bench, to be asked for what is done by hand.
+    pub operator: Option<Arc<dyn Operator>>,
 }
 
 impl Connected {
@@ -74,7 +76,7 @@ pub async fn connect(
         }
         Filled::ByHand(what) => (Box::new(ByHandSource::new(attending(RoleKind::Source, &what)?, what)), None),
     };
-    Ok(Connected { scope, load, source, safe_off: SafeOff::new(source_off, load_off) })
+    Ok(Connected { scope, load, source, safe_off: SafeOff::new(source_off, load_off), operator })
 }
 
 enum Filled {

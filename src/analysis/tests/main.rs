@@ -5,6 +5,7 @@
 mod need;
 
 mod acceptance;
+mod added;
 mod budget;
 mod budget_laws;
 mod circuit;

@@ -107,6 +107,8 @@ pub struct Circuit {
     pub parts: Parts,
     /// Probe.
     pub probe_f: f64,
+    /// A capacitor that somebody soldered from drain to source.
+    pub added_f: f64,
     per: Reciprocals,
 }
 
@@ -161,7 +163,7 @@ impl Reciprocals {
 impl Circuit {
     /// The circuit of these parts with that probe.
     pub fn new(parts: Parts, probe_f: f64) -> Self {
-        Self { parts, probe_f, per: Reciprocals::new(&parts) }
+        Self { parts, probe_f, added_f: 0.0, per: Reciprocals::new(&parts) }
     }
 
     /// Loss current of the core; its conductance grows with amplitude as hysteresis makes it.
@@ -179,7 +181,7 @@ impl Circuit {
         let p = &self.parts;
         p.transistor.capacitance_f(drain_v)
             + p.winding_f
-            + self.probe_f
+            + (self.probe_f + self.added_f)
             + p.clamp.diode.junction.capacitance_f(clamp_node_v - drain_v)
     }
 

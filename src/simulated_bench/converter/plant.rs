@@ -117,6 +117,14 @@ impl Plant {
         }
     }
 
+    /// Solders a capacitor from drain to source, or takes it away again with zero.
+    pub fn set_added_capacitance(&mut self, farad: f64) {
+        if farad != self.circuit.added_f {
+            self.circuit.added_f = farad;
+            self.unsettle();
+        }
+    }
+
     fn unsettle(&mut self) {
         (self.at_rest, self.pauses) = (false, 0);
         (self.orbit, self.steady) = (OnceLock::new(), OnceLock::new());

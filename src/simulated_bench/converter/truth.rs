@@ -41,8 +41,8 @@ pub struct RelaxationRingTruth {
     pub end_s: f64,
     /// Mean bulk voltage between the two.
     pub bulk_v: f64,
-    /// Small-signal capacitance of the drain node at that bulk voltage, probe included: `1/(w0^2 Lp)` of the slow mode
-    /// of the linearised network.
+    /// Small-signal capacitance of the drain node at that bulk voltage, probe and added capacitor included: `1/(w0^2 Lp)` of
+    /// the slow mode of the linearised network.
     pub node_capacitance_f: f64,
     /// Undamped small-signal frequency at that bulk voltage.
     pub frequency_hz: f64,

@@ -120,6 +120,15 @@ impl Bench {
         self.note_state();
     }
 
+    /// Solders a capacitor from drain to source, or takes it away with zero; refused while the line is on.
+    pub fn solder(&mut self, farad: f64) -> bool {
+        let possible = !self.line.on && (0.0..=1e-6).contains(&farad);
+        if possible {
+            self.plant.set_added_capacitance(farad);
+        }
+        possible
+    }
+
     /// Notes which outputs are on, where that has changed.
     pub fn note_state(&mut self) {
         self.truth.state(self.line.on, self.draw.on);
@@ -134,7 +143,17 @@ impl Bench {
             LoadDemand::Resistance(ohm) => (2, ohm),
         };
         let kind = if self.draw.on { kind } else { 3 };
-        key(&[self.seed, on.into(), rms_v.to_bits(), frequency_hz.to_bits(), limit_a.to_bits(), kind, level.to_bits()])
+        let plain = key(&[
+            self.seed,
+            on.into(),
+            rms_v.to_bits(),
+            frequency_hz.to_bits(),
+            limit_a.to_bits(),
+            kind,
+            level.to_bits(),
+        ]);
+        let added_f = self.plant.circuit().added_f;
+        if added_f > 0.0 { key(&[plain, added_f.to_bits()]) } else { plain }
     }
 }
 

@@ -5,7 +5,7 @@ use ringstep_simulated_bench::process::{Options, serve};
 use serde_json::Value;
 use std::{
     env,
-    io::{BufRead, BufReader, Lines},
+    io::{BufRead, BufReader, Lines, Write},
     process::{Child, ChildStdout, Command, Stdio},
     thread,
     time::{Duration, Instant},
@@ -90,4 +90,26 @@ fn two_processes_of_one_seed_capture_the_same_bytes() {
     first.end();
     second.end();
     other.end();
+}
+
+#[test]
+fn hands_solder_only_while_the_line_is_off() {
+    let mut process = Process::start(9);
+    let mut hands = process.child.stdin.take().unwrap();
+    let mut done = |output: &mut Lines<BufReader<ChildStdout>>, line: &str| {
+        writeln!(hands, "{line}").unwrap();
+        let answer: Value = serde_json::from_str(&output.next().unwrap().unwrap()).unwrap();
+        assert_eq!(answer["asked"], line);
+        answer["done"].as_bool().unwrap()
+    };
+    let source = process.announced["source"].as_str().unwrap().to_owned();
+    let mut source = connect(&source);
+    assert!(done(&mut process.output, "solder 47e-12"));
+    for nonsense in ["solder -1e-12", "solder 1", "solder nan", "solder", "weld 1e-12", ""] {
+        assert!(!done(&mut process.output, nonsense), "{nonsense}");
+    }
+    source.accepted("VOLT:RANG 300;:VOLT 230;:FREQ 50;:CURR:LIM 1.5;:OUTP ON");
+    assert!(!done(&mut process.output, "solder 0"));
+    source.accepted("OUTP OFF");
+    assert!(done(&mut process.output, "solder 0"));
 }
