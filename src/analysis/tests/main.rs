@@ -13,6 +13,7 @@ mod cycles;
 mod drain;
 mod fit;
 mod generate;
+mod nist;
 mod quantity;
 mod recording_flyback;
 mod recordings_rlc;
