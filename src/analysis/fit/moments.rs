@@ -1,7 +1,7 @@
 //! The sums that a least-squares step of a damped sinusoid is made of: one vectorised pass over the samples, and the sums without
 //! samples in closed form.
 
-use pulp::Arch;
+use pulp::{Arch, Simd, WithSimd};
 use realfft::num_complex::Complex64;
 
 /// Which vector instructions a fit may use.
@@ -30,7 +30,23 @@ const FRESH: usize = 128;
 
 /// `sum y_n z^n` and `sum n y_n z^n`, with `y` counted from `level`.
 pub(super) fn moments(arch: Arch, samples: &[f64], level: f64, z: Complex64) -> [Complex64; 2] {
-    arch.dispatch(|| chunked(samples, level, z))
+    arch.dispatch(Moments { samples, level, z })
+}
+
+/// A closure would be compiled apart, without the instructions that it is dispatched for.
+struct Moments<'a> {
+    samples: &'a [f64],
+    level: f64,
+    z: Complex64,
+}
+
+impl WithSimd for Moments<'_> {
+    type Output = [Complex64; 2];
+
+    #[inline(always)]
+    fn with_simd<S: Simd>(self, _: S) -> Self::Output {
+        chunked(self.samples, self.level, self.z)
+    }
 }
 
 #[inline(always)]
@@ -86,7 +102,20 @@ fn chunk_moments(samples: &[f64], level: f64, z: Complex64) -> [Complex64; 2] {
 
 /// Sums of `n^k y_n` for k from 0 to 2, and of `y_n^2`, with `y` counted from `level`.
 pub(super) fn power_moments(arch: Arch, samples: &[f64], level: f64) -> ([f64; 3], f64) {
-    arch.dispatch(|| {
+    arch.dispatch(PowerMoments { samples, level })
+}
+
+struct PowerMoments<'a> {
+    samples: &'a [f64],
+    level: f64,
+}
+
+impl WithSimd for PowerMoments<'_> {
+    type Output = ([f64; 3], f64);
+
+    #[inline(always)]
+    fn with_simd<S: Simd>(self, _: S) -> Self::Output {
+        let Self { samples, level } = self;
         let mut sums = [[0.0; LANES]; 4];
         let mut index: [f64; LANES] = std::array::from_fn(|n| n as f64);
         let (vectors, rest) = samples.as_chunks::<LANES>();
@@ -109,13 +138,19 @@ pub(super) fn power_moments(arch: Arch, samples: &[f64], level: f64) -> ([f64; 3
         }
         let sum = |k: usize| sums[k].iter().sum::<f64>();
         ([sum(0), sum(1), sum(2)], sum(3))
-    })
+    }
 }
 
 /// Means of blocks of `block` samples; what is left over at the end is left out.
 pub(super) fn block_means(arch: Arch, samples: &[f64], block: usize) -> Vec<f64> {
     let share = 1.0 / block as f64;
-    arch.dispatch(|| samples.chunks_exact(block).map(|chunk| share * lane_sum(chunk)).collect())
+    let mut means = vec![0.0; samples.len() / block];
+    arch.dispatch(|| {
+        for (mean, chunk) in means.iter_mut().zip(samples.chunks_exact(block)) {
+            *mean = share * lane_sum(chunk);
+        }
+    });
+    means
 }
 
 #[inline(always)]
