@@ -3,7 +3,7 @@
 
 use super::{
     least_squares::Solution,
-    moments::{Instructions, block_means, geometric, moments, power_moments, powers},
+    moments::{Instructions, Moments, block_means, doubled, geometric, moments, powers},
 };
 use nalgebra::DMatrix;
 use pulp::Arch;
@@ -52,9 +52,10 @@ pub struct DampedSinusoid {
 /// Points a period that the search keeps before the last steps at the full rate.
 const POINTS: f64 = 24.0;
 const ITERATIONS: usize = 40;
-/// A step this small against the uncertainty ends the search, as a share of its square: at the full rate, and on block means, which
-/// lie a dozenth of the uncertainty away anyhow.
+/// A step this small against the uncertainty ends the search, as a share of its square: the step itself is still made, and what it
+/// leaves is smaller again by as much. On block means no more is worth it, since they lie a dozenth of the uncertainty away.
 const SMALL: f64 = 1e-8;
+const SMALL_AFTER_MEANS: f64 = 0.02;
 const SMALL_ON_MEANS: f64 = 1e-3;
 /// The decay within reason: growing by `exp(5)`, or gone in a four-hundredth of the record.
 const DECAY: std::ops::Range<f64> = -5.0..400.0;
@@ -78,12 +79,14 @@ pub fn fit_damped_sinusoid_with(
     let block = (count as f64 / (periods.max(1.0) * POINTS)).floor().max(1.0) as usize;
     let Some(thin) = (block > 1 && count / block > 24).then(|| block_means(arch, samples, block)) else {
         let level = block_means(arch, samples, count.max(1)).first().copied()?;
-        return Problem::new(arch, samples, level, base).search(start, SMALL);
+        let problem = Problem::new(arch, samples, level, base);
+        return problem.found(problem.search(start, SMALL)?);
     };
     let level = thin.iter().sum::<f64>() / thin.len() as f64;
     let share = (thin.len() * block) as f64 / count as f64;
     let coarse = Problem::new(arch, &thin, level, base).search(start.map(|x| x * share), SMALL_ON_MEANS)?;
-    Problem::new(arch, samples, level, base).search([coarse.decay / share, coarse.angle / share], SMALL)
+    let problem = Problem::new(arch, samples, level, base);
+    problem.found(problem.search(coarse.at.map(|x| x / share), SMALL_AFTER_MEANS)?)
 }
 
 impl DampedSinusoid {
@@ -120,9 +123,6 @@ struct Problem<'a> {
     /// What the samples are counted from, so that little cancels.
     level: f64,
     base: Base,
-    /// `sum x^k y` and `sum y^2`.
-    plain: [f64; 3],
-    total: f64,
     /// `sum x^k`.
     powers: [f64; 5],
     /// `N^-k`.
@@ -142,22 +142,29 @@ struct Step {
     gram: Matrix,
 }
 
+/// Where a search ended: decay and angle, the linear values and the sum of squares there, and the linear problem of its last step.
+struct End {
+    at: [f64; 2],
+    linear: Vector,
+    squares: f64,
+    last: Step,
+    converged: bool,
+}
+
 impl<'a> Problem<'a> {
     fn new(arch: Arch, samples: &'a [f64], level: f64, base: Base) -> Self {
-        let (mut plain, total) = power_moments(arch, samples, level);
-        let sums: [Complex64; 5] = geometric(Complex64::new(1.0, 0.0), samples.len());
+        let sums: [f64; 5] = doubled(1.0, samples.len());
         let scale: [f64; 5] = powers(1.0 / samples.len() as f64);
-        plain.iter_mut().zip(scale).for_each(|(sum, scale)| *sum *= scale);
-        let powers = std::array::from_fn(|k| sums[k].re * scale[k]);
+        let powers = std::array::from_fn(|k| sums[k] * scale[k]);
         let [scale @ .., _] = scale;
-        Self { arch, samples, level, base, plain, total, powers, scale }
+        Self { arch, samples, level, base, powers, scale }
     }
 
     fn size(&self) -> usize {
         RING + self.base.terms()
     }
 
-    fn search(&self, start: [f64; 2], least: f64) -> Option<DampedSinusoid> {
+    fn search(&self, start: [f64; 2], least: f64) -> Option<End> {
         let mut at = start;
         let mut here = self.about(at)?;
         let mut scale = 1.0;
@@ -168,23 +175,26 @@ impl<'a> Problem<'a> {
             let small = here.gain <= least * here.squares / freedom
                 || here.step.iter().zip(&at).all(|(d, x)| d.abs() < 1e-14 * x.abs().max(1.0));
             if small && allowed && scale == 1.0 {
-                return self.found(trial, &here, &here.whole, here.squares - here.gain, true);
+                let (linear, squares) = (here.whole, here.squares - here.gain);
+                return Some(End { at: trial, linear, squares, last: here, converged: true });
             }
             match allowed.then(|| self.about(trial)).flatten() {
                 Some(there) if there.squares <= here.squares => (at, here, scale) = (trial, there, 1.0),
-                _ if small || scale < 1e-6 => return self.found(at, &here, &here.projected, here.squares, small),
+                _ if small || scale < 1e-6 => return Some(End::at(at, here, small)),
                 _ => scale *= 0.25,
             }
         }
-        self.found(at, &here, &here.projected, here.squares, false)
+        Some(End::at(at, here, false))
     }
 
     fn about(&self, at: [f64; 2]) -> Option<Step> {
         let gram = self.gram(at);
         let (size, head) = (self.size(), self.size() - 2);
-        let (lower, rotated) = factor(&gram, &self.right(at), size)?;
+        let (right, total) = self.right(at);
+        let lower = factor(&gram, size)?;
+        let rotated = forward(&lower, &right, size);
         let (projected, whole) = (back(&lower, &rotated, head), back(&lower, &rotated, size));
-        let squares = self.total - rotated[..head].iter().map(|x| x * x).sum::<f64>();
+        let squares = total - rotated[..head].iter().map(|x| x * x).sum::<f64>();
         let gain = rotated[head] * rotated[head] + rotated[head + 1] * rotated[head + 1];
         let ([c, s, ..], p, r) = (projected, whole[head], whole[head + 1]);
         let power = c * c + s * s;
@@ -193,32 +203,32 @@ impl<'a> Problem<'a> {
         fine.then_some(Step { projected, squares: squares.max(0.0), whole, step, gain, gram })
     }
 
-    /// Inner products of the columns with the samples.
-    fn right(&self, at: [f64; 2]) -> Vector {
+    /// Inner products of the columns with the samples, and of the samples with themselves.
+    fn right(&self, at: [f64; 2]) -> (Vector, f64) {
         let z = (Complex64::new(-at[0], at[1]) * self.scale[1]).exp();
-        let [zeroth, first] = moments(self.arch, self.samples, self.level, z);
+        let Moments { ring: [zeroth, first], plain, total } = moments(self.arch, self.samples, self.level, z);
         let (mut right, terms) = ([0.0; MOST], self.base.terms());
         (right[0], right[1]) = (zeroth.re, zeroth.im);
-        right[2..2 + terms].copy_from_slice(&self.plain[..terms]);
+        (0..terms).for_each(|k| right[2 + k] = plain[k] * self.scale[k]);
         (right[2 + terms], right[3 + terms]) = (first.re * self.scale[1], first.im * self.scale[1]);
-        right
+        (right, total)
     }
 
     /// Inner products of the columns with each other: the lower triangle.
     fn gram(&self, at: [f64; 2]) -> Matrix {
         let number = self.samples.len();
         let log = Complex64::new(-at[0], at[1]) * self.scale[1];
-        let (z, envelope) = (log.exp(), Complex64::new((2.0 * log.re).exp(), 0.0));
-        let envelope: [Complex64; 3] = geometric(envelope, number);
-        let double: [Complex64; 3] = geometric(z * z, number);
-        let single: [Complex64; 4] = geometric(z, number);
+        let (z, last) = (log.exp(), Complex64::new(-at[0], at[1]).exp());
+        let envelope: [f64; 3] = doubled(z.norm_sqr(), number);
+        let double: [Complex64; 3] = geometric(z * z, last * last, number);
+        let single: [Complex64; 4] = geometric(z, last, number);
         let terms = self.base.terms();
         let mut gram = [[0.0; MOST]; MOST];
         // The ring's columns, times x to the power of `k` in all, from a pair of columns on.
         let mut ring = |row: usize, column: usize, k: usize| {
             let scale = 0.5 * self.scale[k];
-            gram[row][column] = scale * (envelope[k].re + double[k].re);
-            gram[row + 1][column + 1] = scale * (envelope[k].re - double[k].re);
+            gram[row][column] = scale * (envelope[k] + double[k].re);
+            gram[row + 1][column + 1] = scale * (envelope[k] - double[k].re);
             (gram[row + 1][column], gram[row][column + 1]) = (scale * double[k].im, scale * double[k].im);
         };
         ring(0, 0, 0);
@@ -233,46 +243,67 @@ impl<'a> Problem<'a> {
         gram
     }
 
-    fn found(
-        &self,
-        at: [f64; 2],
-        step: &Step,
-        linear: &Vector,
-        squares: f64,
-        converged: bool,
-    ) -> Option<DampedSinusoid> {
+    fn found(&self, end: End) -> Option<DampedSinusoid> {
+        let End { at: [decay, angle], linear, squares, last, converged } = end;
         let (c, s, size, terms) = (linear[0], linear[1], self.size(), self.base.terms());
-        // From the columns of the linear problem to decay, angle, cosine, sine, base.
-        let mut to = DMatrix::<f64>::zeros(size, size);
-        let moved = 2 + terms;
-        (to[(moved, 0)], to[(moved + 1, 0)], to[(moved, 1)], to[(moved + 1, 1)]) = (-c, -s, s, -c);
-        (0..moved).for_each(|n| to[(n, n + 2)] = 1.0);
-        let gram = DMatrix::from_fn(size, size, |r, c| step.gram[r.max(c)][r.min(c)]);
-        let inverse = (to.transpose() * gram * &to).cholesky()?.inverse();
+        let inverse = covariance(&last.gram, size, c, s)?;
         let mut base = [0.0; 3];
-        base[..terms].copy_from_slice(&linear[2..moved]);
+        base[..terms].copy_from_slice(&linear[2..2 + terms]);
         base[0] += self.level;
-        let [decay, angle] = at;
         Some(DampedSinusoid { decay, angle, cosine: c, sine: s, base, squares: squares.max(0.0), inverse, converged })
     }
 }
 
-/// Cholesky factor of the leading `size` rows, and the right side in its terms. `None` where the columns are not independent.
-fn factor(gram: &Matrix, right: &Vector, size: usize) -> Option<(Matrix, Vector)> {
-    let (mut lower, mut rotated) = ([[0.0; MOST]; MOST], [0.0; MOST]);
+/// Inverse of the Gram matrix in terms of decay, angle, cosine, sine, base: the step of decay and angle is a rotation of the
+/// coefficients of the columns times `x`, and everything else stands where it stood.
+fn covariance(gram: &Matrix, size: usize, c: f64, s: f64) -> Option<DMatrix<f64>> {
+    let mut inverse = [[0.0; MOST]; MOST];
+    let lower = factor(gram, size)?;
+    for column in 0..size {
+        let mut unit = [0.0; MOST];
+        unit[column] = 1.0;
+        let solved = back(&lower, &forward(&lower, &unit, size), size);
+        (0..size).for_each(|row| inverse[row][column] = solved[row]);
+    }
+    let (power, moved) = (c * c + s * s, size - 2);
+    let turned = |row: usize, of: &dyn Fn(usize) -> f64| match row {
+        0 => -(c * of(moved) + s * of(moved + 1)) / power,
+        1 => (s * of(moved) - c * of(moved + 1)) / power,
+        _ => of(row - 2),
+    };
+    Some(DMatrix::from_fn(size, size, |r, k| turned(r, &|row| turned(k, &|column| inverse[row][column]))))
+}
+
+impl End {
+    fn at(at: [f64; 2], last: Step, converged: bool) -> Self {
+        Self { at, linear: last.projected, squares: last.squares, last, converged }
+    }
+}
+
+/// Cholesky factor of the leading `size` rows. `None` where the columns are not independent.
+fn factor(gram: &Matrix, size: usize) -> Option<Matrix> {
+    let mut lower = [[0.0; MOST]; MOST];
     for row in 0..size {
         for column in 0..=row {
             let known: f64 = (0..column).map(|k| lower[row][k] * lower[column][k]).sum();
             let left = gram[row][column] - known;
             lower[row][column] = if row > column { left / lower[column][column] } else { left.sqrt() };
         }
-        let pivot = lower[row][row];
-        if pivot.is_nan() || pivot <= 0.0 {
+        if lower[row][row].is_nan() || lower[row][row] <= 0.0 {
             return None;
         }
-        rotated[row] = (right[row] - (0..row).map(|k| lower[row][k] * rotated[k]).sum::<f64>()) / pivot;
     }
-    Some((lower, rotated))
+    Some(lower)
+}
+
+/// The right side in terms of the factor.
+fn forward(lower: &Matrix, right: &Vector, size: usize) -> Vector {
+    let mut rotated = [0.0; MOST];
+    for row in 0..size {
+        let known: f64 = (0..row).map(|k| lower[row][k] * rotated[k]).sum();
+        rotated[row] = (right[row] - known) / lower[row][row];
+    }
+    rotated
 }
 
 /// Solves for the leading `size` unknowns.
