@@ -23,7 +23,8 @@ const LAYERS: [(&str, &[&str]); 9] = [
 const PLAIN_DATA: [&str; 6] = ["Identity", "LoadReading", "RawWaveform", "SampleFormat", "SourceReading", "Timing"];
 
 /// Modules of the analysis, each importing only those before it; `lib.rs` joins them.
-const ANALYSIS: [&str; 8] = ["quantity", "budget", "findings", "waveform", "cycles", "fit", "circuit", "entry"];
+const ANALYSIS: [&str; 9] =
+    ["quantity", "budget", "pieces", "findings", "waveform", "cycles", "fit", "circuit", "entry"];
 
 /// The one file that joins the simulated bench.
 const JOINS_THE_BENCH: &str = "cli/simulate.rs";

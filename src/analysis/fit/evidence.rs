@@ -105,9 +105,8 @@ impl Described {
     /// one that rises at all must do more than the faint curvature of a core.
     fn sane(&self) -> bool {
         let Model::Circuit(equation) = self.model else { return true };
-        let laws: Vec<f64> = (-9..=9)
-            .map(|n| equation.relative_capacitance(&self.solution.nonlinear, 0.1 * f64::from(n)))
-            .collect();
+        let laws: Vec<f64> =
+            (-9..=9).map(|n| equation.relative_capacitance(&self.solution.nonlinear, 0.1 * f64::from(n))).collect();
         let lowest = laws.iter().copied().fold(f64::INFINITY, f64::min);
         let highest = laws.iter().copied().fold(0.0, f64::max);
         let valley = laws.iter().position(|&law| law == lowest).unwrap_or(0);
