@@ -105,6 +105,21 @@ pub enum Unit {
     One,
 }
 
+const ALL: [Unit; 12] = [
+    Unit::Henry,
+    Unit::Farad,
+    Unit::Volt,
+    Unit::Ampere,
+    Unit::Watt,
+    Unit::Hertz,
+    Unit::Second,
+    Unit::Ohm,
+    Unit::Kelvin,
+    Unit::DegreeCelsius,
+    Unit::Percent,
+    Unit::One,
+];
+
 impl Unit {
     fn spellings(self) -> &'static [&'static str] {
         match self {
@@ -121,6 +136,11 @@ impl Unit {
             Self::Percent => &["%"],
             Self::One => &[""],
         }
+    }
+
+    /// The unit of that symbol, as [`fmt::Display`] writes it.
+    pub fn of_symbol(symbol: &str) -> Option<Self> {
+        ALL.into_iter().find(|unit| unit.spellings()[0] == symbol)
     }
 
     fn takes_prefix(self) -> bool {

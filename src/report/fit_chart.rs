@@ -6,18 +6,27 @@ use super::{
     text,
     trace::{Trace, thinned},
 };
-use ringstep_analysis::findings::{RingFit, RingKind};
+use ringstep_analysis::{
+    findings::{RingFit, RingKind},
+    fit::curve_v,
+};
 
 const MODEL_POINTS: usize = 700;
 
 /// Draws the fit; `id` must be unique on the page.
 pub(super) fn draw(id: &str, trace: &Trace, fit: &RingFit) -> String {
     let from = fit.start_s;
-    let data = || trace.between(from, fit.end_s).map(move |(time, volts)| (time - from, volts));
+    let captured: Vec<(f64, f64)> = trace.between(from, fit.end_s).map(|(time, volts)| (time - from, volts)).collect();
     let length_s = fit.end_s - from;
-    let model =
-        || (0..=MODEL_POINTS).map(|n| length_s * n as f64 / MODEL_POINTS as f64).map(|time| (time, fit.model_v(time)));
-    let residuals = || data().map(|(time, volts)| (time, volts - fit.model_v(time)));
+    let along = |times: Vec<f64>| -> Vec<(f64, f64)> {
+        let volts = curve_v(fit, &times);
+        times.into_iter().zip(volts).collect()
+    };
+    let curve = along((0..=MODEL_POINTS).map(|n| length_s * n as f64 / MODEL_POINTS as f64).collect());
+    let at_samples = along(captured.iter().map(|(time, _)| *time).collect());
+    let data = || captured.iter().copied();
+    let model = || curve.iter().copied();
+    let residuals = || data().zip(&at_samples).map(|((time, volts), (_, model))| (time, volts - model));
     let x = Axis { low: 0.0, high: length_s, name: "time in the fitted window", unit: "s" };
     let y = Axis::around(data().chain(model()).map(|(_, volts)| volts), 0.06, "drain voltage", "V");
     let axes = Axes { left: 66.0, top: 30.0, width: 400.0, height: 230.0, x, y };

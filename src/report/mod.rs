@@ -3,6 +3,7 @@
 
 mod anatomy;
 mod axes;
+mod budgets;
 mod fit_chart;
 mod line_chart;
 mod load_chart;

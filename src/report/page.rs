@@ -1,7 +1,9 @@
 //! Gathers what the page shows and fills in its template.
 
 use super::{
-    ReportError, anatomy, fit_chart, line_chart, load_chart,
+    ReportError, anatomy,
+    budgets::{self, PointBudgets},
+    fit_chart, line_chart, load_chart,
     text::{self, QUANTITIES},
     timeline::{self, Moment},
     trace::Trace,
@@ -17,6 +19,7 @@ use crate::{
 };
 use askama::Template;
 use ringstep_analysis::{
+    budget::COLUMNS,
     findings::{Findings, RingFit, RingKind},
     quantity::{Measured, Unit},
 };
@@ -40,6 +43,9 @@ struct Page<'a> {
     rows: Vec<Row>,
     loads: Vec<String>,
     doubts: Vec<(String, Vec<DoubtGroup<'a>>)>,
+    budgets: Vec<PointBudgets>,
+    budget_columns: &'static [&'static str],
+    constant_part: Option<String>,
     settings: Vec<Setting>,
     preflight: Vec<(&'a str, bool, &'a str)>,
     moments: Vec<Moment>,
@@ -118,6 +124,9 @@ pub(super) fn render(run: &Run) -> Result<String, ReportError> {
             .map(|point| format!("{}, {}", text::short(point.load_a, "A"), text::short(point.load_w, "W")))
             .collect(),
         doubts: results.points.iter().map(|point| (text::short(point.line_v, "V"), doubt_groups(point))).collect(),
+        budgets: budgets::of(&finished),
+        budget_columns: &COLUMNS,
+        constant_part: budgets::constant(&finished),
         settings: run.captures().map(setting).collect(),
         preflight: run.events().filter_map(preflight).collect(),
         moments: timeline::moments(&run.journal),

@@ -3,9 +3,10 @@
 
 use super::{
     least_squares::Solution,
-    moments::{block_means, geometric, moments, power_moments},
+    moments::{Instructions, block_means, geometric, moments, power_moments, powers},
 };
-use nalgebra::{DMatrix, DVector};
+use nalgebra::DMatrix;
+use pulp::Arch;
 use realfft::num_complex::Complex64;
 
 /// What the ring stands on.
@@ -51,26 +52,38 @@ pub struct DampedSinusoid {
 /// Points a period that the search keeps before the last steps at the full rate.
 const POINTS: f64 = 24.0;
 const ITERATIONS: usize = 40;
-/// A step this small against the uncertainty ends the search, as a share of its square.
+/// A step this small against the uncertainty ends the search, as a share of its square: at the full rate, and on block means, which
+/// lie a dozenth of the uncertainty away anyhow.
 const SMALL: f64 = 1e-8;
+const SMALL_ON_MEANS: f64 = 1e-3;
 /// The decay within reason: growing by `exp(5)`, or gone in a four-hundredth of the record.
 const DECAY: std::ops::Range<f64> = -5.0..400.0;
 
 /// Fits evenly spaced samples from a decay and an angle over the record. Searches on block means, which follow the same curve, and
 /// ends with steps at the full rate, so that nothing of what the samples tell is lost. `None` where the samples hold no such curve.
 pub fn fit_damped_sinusoid(samples: &[f64], start: [f64; 2], base: Base) -> Option<DampedSinusoid> {
+    fit_damped_sinusoid_with(Instructions::Detected, samples, start, base)
+}
+
+/// [`fit_damped_sinusoid`] with a choice of instructions.
+pub fn fit_damped_sinusoid_with(
+    instructions: Instructions,
+    samples: &[f64],
+    start: [f64; 2],
+    base: Base,
+) -> Option<DampedSinusoid> {
+    let arch = instructions.arch();
     let count = samples.len();
     let periods = start[1].abs() / std::f64::consts::TAU;
     let block = (count as f64 / (periods.max(1.0) * POINTS)).floor().max(1.0) as usize;
-    let mut start = start;
-    if block > 1 && count / block > 24 {
-        let thin = Problem::new(block_means(samples, block), base);
-        let share = (thin.samples.len() * block) as f64 / count as f64;
-        let coarse = thin.search([start[0] * share, start[1] * share])?;
-        start = [coarse.decay / share, coarse.angle / share];
-    }
-    let mean = block_means(samples, count)[0];
-    Problem::new(samples.iter().map(|v| v - mean).collect(), base).search(start).map(|found| found.raised(mean))
+    let Some(thin) = (block > 1 && count / block > 24).then(|| block_means(arch, samples, block)) else {
+        let level = block_means(arch, samples, count.max(1)).first().copied()?;
+        return Problem::new(arch, samples, level, base).search(start, SMALL);
+    };
+    let level = thin.iter().sum::<f64>() / thin.len() as f64;
+    let share = (thin.len() * block) as f64 / count as f64;
+    let coarse = Problem::new(arch, &thin, level, base).search(start.map(|x| x * share), SMALL_ON_MEANS)?;
+    Problem::new(arch, samples, level, base).search([coarse.decay / share, coarse.angle / share], SMALL)
 }
 
 impl DampedSinusoid {
@@ -92,151 +105,182 @@ impl DampedSinusoid {
             ..coarse
         }
     }
-
-    fn raised(mut self, level: f64) -> Self {
-        self.base[0] += level;
-        self
-    }
 }
 
-/// Columns of the linear problem: the ring's cosine and sine, both times `x`, and the base.
+/// Columns of the linear problem that the ring takes: cosine and sine first, both times `x` last, the base between.
 const RING: usize = 4;
+/// Columns at most.
+const MOST: usize = 7;
+type Matrix = [[f64; MOST]; MOST];
+type Vector = [f64; MOST];
 
-struct Problem {
-    samples: Vec<f64>,
+struct Problem<'a> {
+    arch: Arch,
+    samples: &'a [f64],
+    /// What the samples are counted from, so that little cancels.
+    level: f64,
     base: Base,
     /// `sum x^k y` and `sum y^2`.
     plain: [f64; 3],
     total: f64,
     /// `sum x^k`.
     powers: [f64; 5],
+    /// `N^-k`.
+    scale: [f64; 4],
 }
 
 /// The solution of the linear problem about a decay and an angle.
 struct Step {
-    /// Cosine, sine and base without the columns times `x`, and their sum of squares.
-    projected: DVector<f64>,
+    /// Cosine, sine and base without the columns times `x`, and what they leave of the sum of squares.
+    projected: Vector,
     squares: f64,
+    /// The same with all columns: the values after the step, to first order.
+    whole: Vector,
     /// Step of decay and angle, and what it is expected to gain.
     step: [f64; 2],
     gain: f64,
-    gram: DMatrix<f64>,
+    gram: Matrix,
 }
 
-impl Problem {
-    fn new(samples: Vec<f64>, base: Base) -> Self {
-        let count = samples.len() as f64;
-        let (mut plain, total) = power_moments(&samples);
-        plain.iter_mut().enumerate().for_each(|(k, sum)| *sum /= count.powi(k as i32));
+impl<'a> Problem<'a> {
+    fn new(arch: Arch, samples: &'a [f64], level: f64, base: Base) -> Self {
+        let (mut plain, total) = power_moments(arch, samples, level);
         let sums: [Complex64; 5] = geometric(Complex64::new(1.0, 0.0), samples.len());
-        let powers = std::array::from_fn(|k| sums[k].re / count.powi(k as i32));
-        Self { samples, base, plain, total, powers }
+        let scale: [f64; 5] = powers(1.0 / samples.len() as f64);
+        plain.iter_mut().zip(scale).for_each(|(sum, scale)| *sum *= scale);
+        let powers = std::array::from_fn(|k| sums[k].re * scale[k]);
+        let [scale @ .., _] = scale;
+        Self { arch, samples, level, base, plain, total, powers, scale }
     }
 
-    fn search(&self, start: [f64; 2]) -> Option<DampedSinusoid> {
+    fn size(&self) -> usize {
+        RING + self.base.terms()
+    }
+
+    fn search(&self, start: [f64; 2], least: f64) -> Option<DampedSinusoid> {
         let mut at = start;
         let mut here = self.about(at)?;
         let mut scale = 1.0;
+        let freedom = (self.samples.len() as f64 - self.size() as f64).max(1.0);
         for _ in 0..ITERATIONS {
-            let freedom = (self.samples.len() as f64 - (RING + self.base.terms()) as f64).max(1.0);
-            let small = here.gain <= SMALL * here.squares / freedom
-                || here.step.iter().zip(&at).all(|(d, x)| d.abs() < 1e-14 * x.abs().max(1.0));
             let trial = [at[0] + scale * here.step[0], at[1] + scale * here.step[1]];
-            let there = (DECAY.contains(&trial[0]) && trial[1] > 0.5).then(|| self.about(trial)).flatten();
-            match there {
-                Some(there) if small || there.squares <= here.squares => (at, here, scale) = (trial, there, 1.0),
-                _ if small => return self.found(at, &here, true),
-                _ if scale < 1e-6 => return self.found(at, &here, false),
+            let allowed = DECAY.contains(&trial[0]) && trial[1] > 0.5;
+            let small = here.gain <= least * here.squares / freedom
+                || here.step.iter().zip(&at).all(|(d, x)| d.abs() < 1e-14 * x.abs().max(1.0));
+            if small && allowed && scale == 1.0 {
+                return self.found(trial, &here, &here.whole, here.squares - here.gain, true);
+            }
+            match allowed.then(|| self.about(trial)).flatten() {
+                Some(there) if there.squares <= here.squares => (at, here, scale) = (trial, there, 1.0),
+                _ if small || scale < 1e-6 => return self.found(at, &here, &here.projected, here.squares, small),
                 _ => scale *= 0.25,
             }
-            if small {
-                return self.found(at, &here, true);
-            }
         }
-        self.found(at, &here, false)
+        self.found(at, &here, &here.projected, here.squares, false)
     }
 
     fn about(&self, at: [f64; 2]) -> Option<Step> {
         let gram = self.gram(at);
-        let right = self.right(at);
-        let size = gram.nrows();
-        // Without the columns times x: order cosine, sine, base.
-        let kept: Vec<usize> = [0, 1].into_iter().chain(RING..size).collect();
-        let small = DMatrix::from_fn(kept.len(), kept.len(), |r, c| gram[(kept[r], kept[c])]);
-        let small_right = DVector::from_fn(kept.len(), |r, _| right[kept[r]]);
-        let projected = small.cholesky()?.solve(&small_right);
-        let squares = self.total - projected.dot(&small_right);
-        let whole = gram.clone().cholesky()?.solve(&right);
-        let gain = self.total - whole.dot(&right);
-        let (c, s, p, r) = (projected[0], projected[1], whole[2], whole[3]);
+        let (size, head) = (self.size(), self.size() - 2);
+        let (lower, rotated) = factor(&gram, &self.right(at), size)?;
+        let (projected, whole) = (back(&lower, &rotated, head), back(&lower, &rotated, size));
+        let squares = self.total - rotated[..head].iter().map(|x| x * x).sum::<f64>();
+        let gain = rotated[head] * rotated[head] + rotated[head + 1] * rotated[head + 1];
+        let ([c, s, ..], p, r) = (projected, whole[head], whole[head + 1]);
         let power = c * c + s * s;
         let step = [-(c * p + s * r) / power, (s * p - c * r) / power];
         let fine = step.iter().all(|d| d.is_finite()) && power > 0.0;
-        fine.then_some(Step { projected, squares: squares.max(0.0), step, gain: squares - gain, gram })
+        fine.then_some(Step { projected, squares: squares.max(0.0), whole, step, gain, gram })
     }
 
     /// Inner products of the columns with the samples.
-    fn right(&self, at: [f64; 2]) -> DVector<f64> {
-        let count = self.samples.len() as f64;
-        let [zeroth, first] = moments(&self.samples, (Complex64::new(-at[0], at[1]) / count).exp());
-        let ring = [zeroth.re, zeroth.im, first.re / count, first.im / count];
-        DVector::from_iterator(
-            RING + self.base.terms(),
-            ring.into_iter().chain(self.plain).take(RING + self.base.terms()),
-        )
+    fn right(&self, at: [f64; 2]) -> Vector {
+        let z = (Complex64::new(-at[0], at[1]) * self.scale[1]).exp();
+        let [zeroth, first] = moments(self.arch, self.samples, self.level, z);
+        let (mut right, terms) = ([0.0; MOST], self.base.terms());
+        (right[0], right[1]) = (zeroth.re, zeroth.im);
+        right[2..2 + terms].copy_from_slice(&self.plain[..terms]);
+        (right[2 + terms], right[3 + terms]) = (first.re * self.scale[1], first.im * self.scale[1]);
+        right
     }
 
-    /// Inner products of the columns with each other.
-    fn gram(&self, at: [f64; 2]) -> DMatrix<f64> {
-        let (number, count) = (self.samples.len(), self.samples.len() as f64);
-        let log = Complex64::new(-at[0], at[1]) / count;
-        let [envelope, double, single] = [Complex64::new(2.0 * log.re, 0.0), 2.0 * log, log].map(Complex64::exp);
+    /// Inner products of the columns with each other: the lower triangle.
+    fn gram(&self, at: [f64; 2]) -> Matrix {
+        let number = self.samples.len();
+        let log = Complex64::new(-at[0], at[1]) * self.scale[1];
+        let (z, envelope) = (log.exp(), Complex64::new((2.0 * log.re).exp(), 0.0));
         let envelope: [Complex64; 3] = geometric(envelope, number);
-        let double: [Complex64; 3] = geometric(double, number);
-        let single: [Complex64; 4] = geometric(single, number);
-        let size = RING + self.base.terms();
-        let entry = |row: usize, column: usize| {
-            // Columns 0 to 3: cosine, sine, and both times x; 4 on: powers of x.
-            if row >= RING {
-                return self.powers[row - RING + column - RING];
-            }
-            let sine = row % 2 == 1;
-            if column >= RING {
-                let k = row / 2 + column - RING;
-                let sum = single[k] / count.powi(k as i32);
-                return if sine { sum.im } else { sum.re };
-            }
-            let k = row / 2 + column / 2;
-            let scale = 0.5 / count.powi(k as i32);
-            scale
-                * match (sine, column % 2 == 1) {
-                    (false, false) => envelope[k].re + double[k].re,
-                    (true, true) => envelope[k].re - double[k].re,
-                    _ => double[k].im,
-                }
+        let double: [Complex64; 3] = geometric(z * z, number);
+        let single: [Complex64; 4] = geometric(z, number);
+        let terms = self.base.terms();
+        let mut gram = [[0.0; MOST]; MOST];
+        // The ring's columns, times x to the power of `k` in all, from a pair of columns on.
+        let mut ring = |row: usize, column: usize, k: usize| {
+            let scale = 0.5 * self.scale[k];
+            gram[row][column] = scale * (envelope[k].re + double[k].re);
+            gram[row + 1][column + 1] = scale * (envelope[k].re - double[k].re);
+            (gram[row + 1][column], gram[row][column + 1]) = (scale * double[k].im, scale * double[k].im);
         };
-        DMatrix::from_fn(size, size, |r, c| if r <= c { entry(r, c) } else { entry(c, r) })
+        ring(0, 0, 0);
+        ring(2 + terms, 0, 1);
+        ring(2 + terms, 2 + terms, 2);
+        for n in 0..terms {
+            (0..=n).for_each(|m| gram[2 + n][2 + m] = self.powers[n + m]);
+            let (plain, moved) = (single[n] * self.scale[n], single[n + 1] * self.scale[n + 1]);
+            (gram[2 + n][0], gram[2 + n][1]) = (plain.re, plain.im);
+            (gram[2 + terms][2 + n], gram[3 + terms][2 + n]) = (moved.re, moved.im);
+        }
+        gram
     }
 
-    fn found(&self, at: [f64; 2], step: &Step, converged: bool) -> Option<DampedSinusoid> {
-        let (c, s) = (step.projected[0], step.projected[1]);
-        let size = step.gram.nrows();
+    fn found(
+        &self,
+        at: [f64; 2],
+        step: &Step,
+        linear: &Vector,
+        squares: f64,
+        converged: bool,
+    ) -> Option<DampedSinusoid> {
+        let (c, s, size, terms) = (linear[0], linear[1], self.size(), self.base.terms());
         // From the columns of the linear problem to decay, angle, cosine, sine, base.
         let mut to = DMatrix::<f64>::zeros(size, size);
-        (to[(2, 0)], to[(3, 0)], to[(2, 1)], to[(3, 1)]) = (-c, -s, s, -c);
-        (to[(0, 2)], to[(1, 3)]) = (1.0, 1.0);
-        (RING..size).for_each(|n| to[(n, n)] = 1.0);
-        let inverse = (to.transpose() * &step.gram * &to).cholesky()?.inverse();
-        let base = std::array::from_fn(|k| step.projected.get(2 + k).copied().unwrap_or(0.0));
-        Some(DampedSinusoid {
-            decay: at[0],
-            angle: at[1],
-            cosine: c,
-            sine: s,
-            base,
-            squares: step.squares,
-            inverse,
-            converged,
-        })
+        let moved = 2 + terms;
+        (to[(moved, 0)], to[(moved + 1, 0)], to[(moved, 1)], to[(moved + 1, 1)]) = (-c, -s, s, -c);
+        (0..moved).for_each(|n| to[(n, n + 2)] = 1.0);
+        let gram = DMatrix::from_fn(size, size, |r, c| step.gram[r.max(c)][r.min(c)]);
+        let inverse = (to.transpose() * gram * &to).cholesky()?.inverse();
+        let mut base = [0.0; 3];
+        base[..terms].copy_from_slice(&linear[2..moved]);
+        base[0] += self.level;
+        let [decay, angle] = at;
+        Some(DampedSinusoid { decay, angle, cosine: c, sine: s, base, squares: squares.max(0.0), inverse, converged })
     }
+}
+
+/// Cholesky factor of the leading `size` rows, and the right side in its terms. `None` where the columns are not independent.
+fn factor(gram: &Matrix, right: &Vector, size: usize) -> Option<(Matrix, Vector)> {
+    let (mut lower, mut rotated) = ([[0.0; MOST]; MOST], [0.0; MOST]);
+    for row in 0..size {
+        for column in 0..=row {
+            let known: f64 = (0..column).map(|k| lower[row][k] * lower[column][k]).sum();
+            let left = gram[row][column] - known;
+            lower[row][column] = if row > column { left / lower[column][column] } else { left.sqrt() };
+        }
+        let pivot = lower[row][row];
+        if pivot.is_nan() || pivot <= 0.0 {
+            return None;
+        }
+        rotated[row] = (right[row] - (0..row).map(|k| lower[row][k] * rotated[k]).sum::<f64>()) / pivot;
+    }
+    Some((lower, rotated))
+}
+
+/// Solves for the leading `size` unknowns.
+fn back(lower: &Matrix, rotated: &Vector, size: usize) -> Vector {
+    let mut solved = [0.0; MOST];
+    for row in (0..size).rev() {
+        let known: f64 = (row + 1..size).map(|k| lower[k][row] * solved[k]).sum();
+        solved[row] = (rotated[row] - known) / lower[row][row];
+    }
+    solved
 }

@@ -53,7 +53,9 @@ pub struct Solution {
 }
 
 /// A step is small where what it promises is this share of a residual variance.
-const SMALL: f64 = 1e-10;
+const SMALL: f64 = 1e-14;
+/// Sums of squares are not told apart closer than this.
+const ROUNDING: f64 = 1e-13;
 
 /// Linear parameters at given nonlinear ones, and what is left. `None` where the columns are not independent.
 pub fn project(curve: &impl Curve, times: &[f64], samples: &[f64], nonlinear: &[f64]) -> Option<(Vec<f64>, Vec<f64>)> {
@@ -144,7 +146,7 @@ pub fn solve(curve: &impl Curve, times: &[f64], samples: &[f64], start: &[f64], 
         let small = gain < SMALL * place.squares / freedom
             || step.iter().zip(&nonlinear).all(|(d, x)| d.abs() < 1e-14 * x.abs().max(1e-3));
         let there = curve.allows(&trial).then(|| Place::of(curve, times, samples, &trial)).flatten();
-        match there.filter(|there| there.squares <= place.squares) {
+        match there.filter(|there| there.squares <= place.squares * (1.0 + ROUNDING)) {
             Some(there) => {
                 (nonlinear, place) = (trial, there);
                 (factor, rotated) = place.factor(curve, times, &nonlinear);

@@ -19,9 +19,10 @@ mod start;
 mod verdict;
 mod window;
 
-pub use damped_sinusoid::{Base, DampedSinusoid, fit_damped_sinusoid};
+pub use damped_sinusoid::{Base, DampedSinusoid, fit_damped_sinusoid, fit_damped_sinusoid_with};
 pub use drawing::curve_v;
 pub use joint::{Joined, join};
+pub use moments::Instructions;
 pub use ring::{combine, ring_of, weighted_mean};
 pub use window::find_ring_down;
 

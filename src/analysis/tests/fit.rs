@@ -6,7 +6,7 @@ use crate::{
 };
 use ringstep_analysis::{
     findings::RingKind,
-    fit::{Accepted, fit_ring},
+    fit::{Accepted, Base, fit_damped_sinusoid, fit_ring},
 };
 use std::{f64::consts::TAU, process::Command};
 
@@ -91,5 +91,49 @@ fn a_general_least_squares_library_finds_the_same_minimum() {
             assert!(difference < 0.15, "parameter {n}: {difference} standard uncertainties apart");
             assert!((0.8..1.3).contains(&uncertainty), "parameter {n}: uncertainty {uncertainty} times theirs");
         }
+    }
+}
+
+/// A fit of `scripts/check_fits.py`.
+#[derive(serde::Deserialize)]
+struct Stored {
+    name: String,
+    volts: Vec<f64>,
+    start: [f64; 2],
+    parameters: Vec<f64>,
+    covariance: Vec<Vec<f64>>,
+    squares: f64,
+}
+
+/// `scipy.optimize.curve_fit` 's results on the same samples, from `scripts/check_fits.py`: the same minimum to a small fraction of
+/// the uncertainty, and the same covariance.
+#[test]
+fn parameters_and_covariance_agree_with_a_general_least_squares_library() {
+    let all: Vec<Stored> = serde_json::from_str(include_str!("fits_library.json")).unwrap();
+    assert!(all.len() >= 5);
+    for Stored { name, volts, start, parameters, covariance, squares } in all {
+        let base = if parameters.len() == 7 { Base::Bent } else { Base::Straight };
+        let ours = fit_damped_sinusoid(&volts, start, base).unwrap();
+        assert!(ours.converged, "{name}");
+        let values: Vec<f64> = [ours.decay, ours.angle, ours.cosine, ours.sine]
+            .into_iter()
+            .chain(ours.base)
+            .take(parameters.len())
+            .collect();
+        let variance = ours.squares / (volts.len() - parameters.len()) as f64;
+        let deviation = |n: usize| covariance[n][n].sqrt();
+        let (mut apart, mut unlike) = (0.0_f64, 0.0_f64);
+        for row in 0..parameters.len() {
+            apart = apart.max((values[row] - parameters[row]).abs() / deviation(row));
+            for column in 0..parameters.len() {
+                let difference = ours.inverse[(row, column)] * variance - covariance[row][column];
+                unlike = unlike.max(difference.abs() / (deviation(row) * deviation(column)));
+            }
+        }
+        let more = ours.squares / squares - 1.0;
+        println!("{name}: {apart:.1e} uncertainties apart, covariance {unlike:.1e}, sum of squares {more:+.1e}");
+        assert!(apart < 1e-3, "{name}: {apart}");
+        assert!(unlike < 1e-3, "{name}: {unlike}");
+        assert!(more.abs() < 1e-9, "{name}: {more}");
     }
 }
