@@ -474,8 +474,8 @@ fn an_interrupt_at_the_terminal_ends_the_waiting_with_everything_off() {
     let said = String::from_utf8_lossy(&output.stdout);
     assert!(said.starts_with("130\n"), "{said}");
     assert!(said.contains("NOT KNOWN") && said.contains("source confirmed off, load confirmed off"), "{said}");
-    let states = bench.truths().into_iter().filter_map(|truth| truth.get("state").cloned());
-    assert_eq!(states.last().unwrap()["source_on"], false);
+    let mut states = bench.truths().into_iter().filter_map(|truth| truth.get("state").cloned());
+    assert_eq!(states.next_back().unwrap()["source_on"], false);
 }
 
 /// Nobody solders at the other end of a pipe.

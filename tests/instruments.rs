@@ -5,7 +5,7 @@ use ringstep::{
     station::{Connected, OffState, Probe, Role, SafetyLimits, ScopeRole, Station, connect},
     transport::{CollectedExchanges, Direction, ExchangeLog},
 };
-use ringstep_analysis::quantity::Measured;
+use ringstep_analysis::{findings::Accuracy, quantity::Measured};
 use ringstep_simulated_bench::process::{self, Options, RunningBench};
 use std::{sync::Arc, time::Duration};
 use tokio::time::{Instant, sleep};
@@ -48,6 +48,7 @@ impl Bench {
                 compensated: None,
             },
             limits: SafetyLimits { drain_v: 700.0, line_v: 265.0, line_current_a: 1.0, load_power_w: 60.0 },
+            accuracy: Accuracy::default(),
         }
     }
 

@@ -161,6 +161,7 @@ fn findings(purpose: Purpose, bulk_v: f64) -> Findings {
         peak_drain_voltage_v: Some(measured(bulk_v + CLAMP_V, 0.01)),
         turn_on_rate_hz: Some(measured(21e3, 0.01)),
         cycles,
+        budgets: Vec::new(),
         ring_fits,
         doubts,
     }

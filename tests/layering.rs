@@ -23,7 +23,8 @@ const LAYERS: [(&str, &[&str]); 9] = [
 const PLAIN_DATA: [&str; 6] = ["Identity", "LoadReading", "RawWaveform", "SampleFormat", "SourceReading", "Timing"];
 
 /// Modules of the analysis, each importing only those before it; `lib.rs` joins them.
-const ANALYSIS: [&str; 8] = ["quantity", "budget", "findings", "waveform", "cycles", "fit", "circuit", "entry"];
+const ANALYSIS: [&str; 9] =
+    ["quantity", "budget", "pieces", "findings", "waveform", "cycles", "fit", "circuit", "entry"];
 
 /// The one file that joins the simulated bench.
 const JOINS_THE_BENCH: &str = "cli/simulate.rs";
@@ -32,14 +33,14 @@ fn source() -> PathBuf {
     Path::new(env!("CARGO_MANIFEST_DIR")).join("src")
 }
 
-/// Every Rust file below a folder with its path from there, tests of the other packages left out.
+/// Every Rust file below a folder with its path from there, tests and benches of the other packages left out.
 fn files_below(folder: &Path) -> Vec<(String, String)> {
     let mut found = Vec::new();
     let mut folders = vec![folder.to_owned()];
     while let Some(next) = folders.pop() {
         for entry in fs::read_dir(next).unwrap() {
             let path = entry.unwrap().path();
-            if path.is_dir() && path.file_name().is_none_or(|name| name != "tests") {
+            if path.is_dir() && path.file_name().is_none_or(|name| name != "tests" && name != "benches") {
                 folders.push(path);
             } else if path.extension().is_some_and(|extension| extension == "rs") {
                 let name = path.strip_prefix(folder).unwrap().to_string_lossy().into_owned();

@@ -317,7 +317,7 @@ fn outcome(
         Ok(result) => outcome.relaxation = Some(result),
         Err(refusal) => outcome.refusals.push(format!("relaxation ring: {refusal}")),
     }
-    outcome.doubts.extend(bare_moved("relaxation", &nodes, relaxation_hz));
+    outcome.doubts.extend(bare_moved("relaxation", &nodes, outcome.relaxation.as_ref(), relaxation_hz));
     let lines = [0, 1].map(|load| line(options, &nodes, |node| node.leakage_hz[load]));
     let uncertainty =
         |load: &usize| lines[*load].as_ref().map_or(f64::INFINITY, |r| r.inductance_h.relative_uncertainty());
@@ -326,7 +326,7 @@ fn outcome(
         Ok(result) => {
             outcome.leakage = Some(result.clone());
             outcome.leakage_load_a = Some(loads_a[load]);
-            outcome.doubts.extend(bare_moved("leakage", &nodes, |node| node.leakage_hz[load]));
+            outcome.doubts.extend(bare_moved("leakage", &nodes, Some(result), |node| node.leakage_hz[load]));
         }
         Err(refusal) => outcome.refusals.push(format!("leakage ring: {refusal}")),
     }
@@ -349,13 +349,26 @@ fn line(
     added_capacitors(&points.collect::<Vec<_>>(), options).map_err(|refusal| refusal.to_string())
 }
 
-/// A doubt where the bare node, first and last of all, rings at another frequency than before by more than chance.
-fn bare_moved(name: &str, nodes: &[Node], frequency_hz: impl Fn(&Node) -> Option<Measured>) -> Option<AddedDoubt> {
+/// A doubt where the bare node, first and last of all, rings at another frequency than before, by more than chance and by enough to
+/// move the capacitance by its standard uncertainty.
+fn bare_moved(
+    name: &str,
+    nodes: &[Node],
+    result: Option<&AddedResult>,
+    frequency_hz: impl Fn(&Node) -> Option<Measured>,
+) -> Option<AddedDoubt> {
     let bare = |node: &&Node| node.capacitance_f.value == 0.0;
     let before = frequency_hz(nodes.first().filter(bare)?)?;
     let after = frequency_hz(nodes.last().filter(bare)?)?;
     let both = before.standard_uncertainty.hypot(after.standard_uncertainty);
-    if (after.value - before.value).abs() <= BARE_DISAGREES * both {
+    let moved_hz = (after.value - before.value).abs();
+    let matters = result.is_none_or(|result| {
+        // The capacitance of a pair moves by 2k/(k - 1) of a relative change of frequency, k the squared period ratio.
+        let squared = result.period_ratio * result.period_ratio;
+        let moved = 2.0 * squared / (squared - 1.0) * moved_hz / before.value;
+        moved > result.node_capacitance_f.relative_uncertainty()
+    });
+    if moved_hz <= BARE_DISAGREES * both || !matters {
         return None;
     }
     let hertz = |value: Measured| value.text_with_standard_uncertainty(Unit::Hertz);
