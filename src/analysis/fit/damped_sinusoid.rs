@@ -55,7 +55,7 @@ const ITERATIONS: usize = 40;
 /// A step this small against the uncertainty ends the search, as a share of its square: the step itself is still made, and what it
 /// leaves is smaller again by as much. On block means no more is worth it, since they lie a dozenth of the uncertainty away.
 const SMALL: f64 = 1e-8;
-const SMALL_AFTER_MEANS: f64 = 0.02;
+const SMALL_AFTER_MEANS: f64 = 1e-3;
 const SMALL_ON_MEANS: f64 = 1e-3;
 /// The decay within reason: growing by `exp(5)`, or gone in a four-hundredth of the record.
 const DECAY: std::ops::Range<f64> = -5.0..400.0;
