@@ -228,7 +228,7 @@ pub(crate) fn most(x: [f64; 3]) -> f64 {
 }
 
 /// Everything that the estimator must hold, in each of the cells.
-fn hold_at_the_bound(cells: &[Cell], count: usize, every: usize) {
+fn hold_at_the_bound(cells: &[Cell], count: usize, every: usize) -> Vec<Row> {
     let rows = each_cell(cells, |n, cell| row(1000 + n as u64, cell, count, every));
     println!("Frequency, decay, amplitude: {count} records a cell, the whole path on one in {every}.");
     println!(
@@ -279,12 +279,13 @@ fn hold_at_the_bound(cells: &[Cell], count: usize, every: usize) {
         assert!(most(row.estimator.bias()) < 0.1, "{cell:?}");
         assert!(row.distance < 0.01, "{cell:?}");
     }
+    rows
 }
 
 #[test]
 fn estimator_is_at_the_bound() {
     let cells = grid(&[6.0, 12.0], &[20.0, 100.0], &[8.0, 40.0], &[None, Some(30.0)]);
-    hold_at_the_bound(&cells, 1000, 50);
+    hold_at_the_bound(&cells, 1000, 100);
 }
 
 #[test]
@@ -292,7 +293,11 @@ fn estimator_is_at_the_bound() {
 fn estimator_table_bound() {
     let steps = [None, Some(30.0), Some(80.0)];
     let cells = grid(&[3.0, 6.0, 12.0, 25.0], &[20.0, 50.0, 100.0], &[8.0, 15.0, 40.0], &steps);
-    hold_at_the_bound(&cells, records(10_000), 10);
+    let rows = hold_at_the_bound(&cells, records(5000), 5);
+    // The choice of the model may lose nothing on linear records.
+    for (cell, row) in cells.iter().zip(&rows) {
+        assert!(most(row.path.paired()) <= 1.05, "{cell:?}: the whole path loses {:?}", row.path.paired());
+    }
 }
 
 /// RMS errors in bounds of exact least squares, and ours over those of exact least squares, estimator and whole path.
