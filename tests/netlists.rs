@@ -2,6 +2,7 @@
 //! oracle for the analysis that shares no line with the simulated bench. Where ngspice is absent a small stored set stands in.
 
 mod held;
+mod intervals;
 mod simulation;
 mod stored;
 mod truth;

@@ -9,6 +9,9 @@ use ringstep_analysis::{
     quantity::Measured,
 };
 
+/// Findings with the numbers of their captures.
+type Numbered<'a> = &'a [(usize, Findings)];
+
 /// What was captured at one point.
 pub(super) struct Captured<'a> {
     pub(super) survey: &'a Survey,
@@ -63,7 +66,7 @@ pub(super) fn leakage_frequencies(captured: &Captured<'_>) -> [Option<Measured>;
 
 /// The leakage rings with the captures they are taken from, at the load where they are known best: at the load start they are large,
 /// but the clamp may conduct again on later crests; at the measuring load they are clean, but small.
-fn leakage_rings<'a>(captured: &Captured<'a>) -> Option<(Vec<Ring>, &'a [(usize, Findings)])> {
+fn leakage_rings<'a>(captured: &Captured<'a>) -> Option<(Vec<Ring>, Numbered<'a>)> {
     let sets = [captured.relaxation, captured.leakage].into_iter();
     let known = sets.filter_map(|set| {
         let rings = rings(set, |findings| findings.leakage_ring);

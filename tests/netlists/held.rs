@@ -9,7 +9,6 @@ use ringstep_analysis::{
     analyse,
     findings::{BoardFacts, DoubtName, Findings, Subject},
     quantity::Measured,
-    waveform::{Samples, TimeAxis},
 };
 
 /// Edges are found this well: the slowest of these boards takes 0.1 us to charge its node.
@@ -22,11 +21,7 @@ fn analysed(board: &str) -> (Truth, Recording, Findings) {
         true => Recording::digitise(board, &simulate(board), &truth, INTERVAL_S),
         false => Recording::read(board),
     };
-    let scale = &recording.scale;
-    let time = TimeAxis::Even { start_s: scale.start_s, interval_s: scale.interval_s };
-    let range = (scale.offset_v, scale.offset_v + 255.0 * scale.scale_v);
-    let samples = Samples::new(time, recording.volts()).unwrap();
-    let samples = samples.with_range(Some(scale.scale_v), Some(range)).unwrap();
+    let samples = recording.samples();
     let inductance = Measured { value: truth.primary_inductance_h, standard_uncertainty: 0.0 };
     let facts = BoardFacts {
         primary_inductance_h: Some(inductance),

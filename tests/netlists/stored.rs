@@ -9,6 +9,7 @@ use rand_chacha::{
     ChaCha8Rng,
     rand_core::{Rng, SeedableRng},
 };
+use ringstep_analysis::waveform::{Samples, TimeAxis};
 use serde::{Deserialize, Serialize};
 use std::{fs, path::PathBuf};
 
@@ -35,11 +36,17 @@ pub(super) struct Scale {
 impl Recording {
     /// Samples the simulated drain evenly over a range that holds it all.
     pub(super) fn digitise(board: &str, simulated: &Simulated, truth: &Truth, interval_s: f64) -> Self {
+        let seed = board.bytes().map(u64::from).sum();
+        Self::with_noise(seed, simulated, truth, interval_s)
+    }
+
+    /// The same with another draw of noise.
+    pub(super) fn with_noise(seed: u64, simulated: &Simulated, truth: &Truth, interval_s: f64) -> Self {
         let even = evenly(simulated, truth, interval_s);
         let peak = even.iter().copied().fold(0.0, f64::max);
         let top = (1.05 * peak / 50.0).ceil() * 50.0;
         let (scale_v, offset_v) = ((top + 50.0) / 256.0, -50.0);
-        let mut generator = ChaCha8Rng::seed_from_u64(board.bytes().map(u64::from).sum());
+        let mut generator = ChaCha8Rng::seed_from_u64(seed);
         let code = |v: &f64| {
             let wanted = (v - offset_v) / scale_v + NOISE_CODES * normal(&mut generator);
             wanted.round().clamp(0.0, 255.0) as u8
@@ -57,6 +64,15 @@ impl Recording {
     /// Voltages.
     pub(super) fn volts(&self) -> Vec<f64> {
         self.codes.iter().map(|&code| self.scale.scale_v * f64::from(code) + self.scale.offset_v).collect()
+    }
+
+    /// As the analysis takes it.
+    pub(super) fn samples(&self) -> Samples {
+        let scale = &self.scale;
+        let time = TimeAxis::Even { start_s: scale.start_s, interval_s: scale.interval_s };
+        let range = (scale.offset_v, scale.offset_v + 255.0 * scale.scale_v);
+        let samples = Samples::new(time, self.volts()).unwrap();
+        samples.with_range(Some(scale.scale_v), Some(range)).unwrap()
     }
 
     /// The stored recording of a board.

@@ -125,8 +125,8 @@ fn parameters_and_covariance_agree_with_a_general_least_squares_library() {
         let (mut apart, mut unlike) = (0.0_f64, 0.0_f64);
         for row in 0..parameters.len() {
             apart = apart.max((values[row] - parameters[row]).abs() / deviation(row));
-            for column in 0..parameters.len() {
-                let difference = ours.inverse[(row, column)] * variance - covariance[row][column];
+            for (column, theirs) in covariance[row].iter().enumerate().take(parameters.len()) {
+                let difference = ours.inverse[(row, column)] * variance - theirs;
                 unlike = unlike.max(difference.abs() / (deviation(row) * deviation(column)));
             }
         }
