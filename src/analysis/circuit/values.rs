@@ -20,6 +20,10 @@ const TEXTBOOK_HALF_WIDTH: f64 = 0.27;
 const CLAMP_HALF_WIDTH: f64 = 0.015;
 /// Usual leakage over primary inductance where no leakage ring was seen (common practice, 1 to 3 %).
 const USUAL_LEAKAGE: f64 = 0.03;
+/// Relative half-widths of what one resonance leaves out of the node and of the plateau: the losses' place in the circuit, what the
+/// rectifier and the output do while they conduct. Judged from circuits solved in full by a general-purpose simulator.
+const NODE_AS_RESONANCE: f64 = 0.002;
+const PLATEAU_AS_RESONANCE: f64 = 0.005;
 /// Rings from which many may tell what one cannot, and the standard uncertainties by which it must stand out.
 const FEWEST_FOR_LAW: usize = 3;
 const LAW_STANDS_OUT: f64 = 2.0;
@@ -187,7 +191,8 @@ impl CircuitValues {
     }
 }
 
-/// The model of the relaxation ring: inputs in the order noise, repeatability, choice of the model, time base, inductance, capacitance behind the leakage.
+/// The model of the relaxation ring: inputs in the order noise, repeatability, choice of the model, time base, inductance, capacitance behind
+/// the leakage, node as one resonance.
 struct NodeModel<'a> {
     facts: &'a BoardFacts,
     decay_per_s: f64,
@@ -198,7 +203,7 @@ struct NodeModel<'a> {
 
 /// Inputs of one ring, and of [`NodeModel`].
 const RING: usize = 3;
-const NODE: usize = RING + 3;
+const NODE: usize = RING + 4;
 
 impl<'a> NodeModel<'a> {
     fn new(relaxation: &RingObservation, observed: &Observed, facts: &'a BoardFacts) -> Self {
@@ -214,6 +219,7 @@ impl<'a> NodeModel<'a> {
         let angular = std::f64::consts::TAU * relaxation.frequency_hz.value;
         let about_f = 1.0 / (angular * angular * inductance.value);
         inputs.push(behind_the_leakage(leakage_share, about_f, facts));
+        inputs.push(Input::rectangular("node as one resonance", Unit::One, 0.0, NODE_AS_RESONANCE));
         Self { facts, decay_per_s: relaxation.decay_per_s, inputs, leakage_share }
     }
 
@@ -230,14 +236,16 @@ impl<'a> NodeModel<'a> {
             let probe = self.facts.probe_capacitance_f?;
             inputs.push(Input::normal("probe capacitance", Unit::Farad, probe).in_common());
         }
-        let model = |x: &[f64]| self.ringing(x) + x[NODE - 1] - x.get(NODE).copied().unwrap_or(0.0);
+        let model =
+            |x: &[f64]| (self.ringing(x) + x[NODE - 2]) * (1.0 + x[NODE - 1]) - x.get(NODE).copied().unwrap_or(0.0);
         Model::new(name, Unit::Farad, inputs, model).first_order().ok()
     }
 
     /// Leakage inductance, and whether it is the textbook value.
     fn leakage(&self, leakage: &RingObservation, observed: &Observed, facts: &BoardFacts) -> Option<(Budget, bool)> {
-        let mut inputs = self.inputs[..NODE - 1].to_vec();
+        let mut inputs = self.inputs[..RING + 2].to_vec();
         inputs.extend(leakage.inputs("leakage"));
+        inputs.push(Input::rectangular("plateau as one resonance", Unit::One, 0.0, PLATEAU_AS_RESONANCE));
         let pieces = self.piece_inputs(observed, facts);
         let textbook = pieces.is_none();
         inputs.extend(pieces.unwrap_or_else(|| {
@@ -247,14 +255,15 @@ impl<'a> NodeModel<'a> {
         let snubber = facts.pieces.snubber.as_ref();
         let model = |x: &[f64]| {
             let ringing = self.ringing(x);
-            let (leakage_inputs, parts) = x[NODE - 1..].split_at(RING);
-            let plateau = match *parts {
+            let (leakage_inputs, rest) = x[RING + 2..].split_at(RING);
+            let plateau = match rest[1..] {
                 [factor] => ringing * factor,
                 [secondary, fall, rise] => ringing - secondary * share * share - fall + rise,
                 _ => f64::NAN,
             };
             let frequency = leakage_inputs.iter().sum::<f64>() * (1.0 + x[RING]);
-            other_element(frequency, leakage.decay_per_s, Known::Capacitance(plateau), snubber).unwrap_or(f64::NAN)
+            let element = other_element(frequency, leakage.decay_per_s, Known::Capacitance(plateau), snubber);
+            element.map_or(f64::NAN, |inductance| inductance * (1.0 + rest[0]))
         };
         let model = Model::new("leakage inductance", Unit::Henry, inputs, model);
         let budget = if textbook { model.first_order() } else { model.budget(TRIALS, SEED) };

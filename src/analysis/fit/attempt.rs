@@ -83,7 +83,7 @@ fn finish<'a>(
     let variance = best.noise.variance;
     let strength = (flat - best.solution.squares) / variance.max(f64::MIN_POSITIVE);
     let residual = best.solution.residual.clone();
-    let (block, best) = at_full_rate(record, &series, best);
+    let (block, best, squares) = at_full_rate(record, &series, best);
     let whole = Series { block, ..series.clone() };
     let mut fit = report::ring_fit(record, kind, &whole, &best);
     let ring = report::ring(&whole, &best);
@@ -91,22 +91,25 @@ fn finish<'a>(
     if let Model::Circuit(_) = best.model {
         shift = Some(report::ring(&series, &plain).frequency_hz.value / ring.frequency_hz.value - 1.0);
     }
-    fit.residual_v = report::residual_v(record, &fit);
+    fit.residual_v = report::residual_v(record, &fit, squares);
     Some(Tried { record: *record, series, plain, fit, ring, shift, variance, residual, strength })
 }
 
 /// Block means lose a little, and the samples left over at the end: where the model allows, the last steps are made at the full
-/// rate. The samples averaged into one in what is returned, and the fit.
-fn at_full_rate(record: &RingRecord<'_>, series: &Series, best: Described) -> (usize, Described) {
+/// rate. The samples averaged into one in what is returned, the fit, and its sum of squares over all samples.
+fn at_full_rate(record: &RingRecord<'_>, series: &Series, best: Described) -> (usize, Described, Option<f64>) {
     let base = match best.model {
         Model::Ringing(Floor::Straight) => Base::Straight,
         Model::Ringing(Floor::Bent) => Base::Bent,
-        _ => return (series.block, best),
+        _ => return (series.block, best, None),
     };
     let start = [best.solution.nonlinear[0], best.solution.nonlinear[1]];
     let even = matches!(record.times_s, Times::Even { .. });
     match even.then(|| fit_damped_sinusoid(record.volts, start, base)).flatten() {
-        Some(exact) => (1, Described { solution: exact.solution(series.block as f64, best.solution), ..best }),
-        None => (series.block, best),
+        Some(exact) => {
+            let solution = exact.solution(series.block as f64, best.solution);
+            (1, Described { solution, ..best }, Some(exact.squares))
+        }
+        None => (series.block, best, None),
     }
 }

@@ -97,7 +97,7 @@ impl CircuitEquation {
         let (decay, angle) = (p[0], p[1]);
         let (u, s) = (state.u, state.s);
         let inside = (1.0 + u / POLE).max(1e-3);
-        let y = inside.ln();
+        let y = if self.degree > 0 { inside.ln() } else { 0.0 };
         let (mut sum, mut slope) = (0.0, 0.0);
         for &b in self.degrees(p).iter().rev() {
             slope = slope * y + sum + b;

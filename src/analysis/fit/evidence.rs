@@ -62,21 +62,26 @@ pub(super) struct Described {
     pub(super) noise: Noise,
 }
 
-/// What a floor's bend, core loss and a law of one degree more must explain, in variances of the noise, to be believed: once in a
-/// thousand rings without them, noise does. Being too easily convinced costs a little certainty, being too hard leaves a bias.
+/// What a floor's bend must explain, in variances of the noise, to be believed: once in a thousand rings without it, noise does, and a
+/// bend that is not there costs little.
 const MORE: f64 = 11.0;
+/// The same for core loss and the first degree of a law: one that is not there moves decay or frequency by as many of its own standard
+/// uncertainties as the root of this.
+const CURVED: f64 = 25.0;
 /// The same for two degrees of a law at once where there was none.
-const CIRCUIT: f64 = 16.0;
+const CIRCUIT: f64 = 30.0;
 /// The same for one more degree of the law, once there is one.
 const DEGREE: f64 = 6.0;
 /// Share of its threshold that a step must promise by its slope alone to be worth a fit.
-const SCREEN: f64 = 0.3;
+const SCREEN: f64 = 0.5;
 /// Share of its range by which a law may go the wrong way: a polynomial follows a knee only so far.
 const WRONG: f64 = 0.1;
 /// Range of a law, over its lowest value, below which rising is no rectifier's doing.
 const FAINT: f64 = 0.02;
 /// Ring periods from which a leakage ring's floor is bent always: the plateau droops, and a bend costs under 4 % there.
 const BENT_PERIODS: f64 = 6.0;
+/// Points a period that the alternative keeps: it is only compared, not reported.
+const ALTERNATIVE_POINTS: f64 = 32.0;
 /// Iterations of one fit.
 const ITERATIONS: usize = 60;
 
@@ -163,7 +168,12 @@ pub(super) fn described(plain: Described, series: &Series) -> Described {
 
 fn better(best: &Described, series: &Series) -> Option<Described> {
     let variance = best.noise.variance.max(f64::MIN_POSITIVE);
-    let mut promising: Vec<(f64, f64, Model)> = larger(best)
+    let mut candidates = larger(best);
+    if !promises(&everything(best), best, series, SCREEN * MORE.min(DEGREE)) {
+        // A drooping floor is no part of everything.
+        candidates.retain(|(model, _)| model.floor() == Floor::Drooping && best.model.floor() == Floor::Bent);
+    }
+    let mut promising: Vec<(f64, f64, Model)> = candidates
         .into_iter()
         .filter_map(|(model, threshold)| {
             let (squares, gain) = promised_gain(&model, &series.times, &series.volts, &best.towards(model))?;
@@ -178,13 +188,33 @@ fn better(best: &Described, series: &Series) -> Option<Described> {
     })
 }
 
+/// Whether a larger model promises to explain so many variances more.
+fn promises(model: &Model, best: &Described, series: &Series, threshold: f64) -> bool {
+    let promised = promised_gain(model, &series.times, &series.volts, &best.towards(*model));
+    promised.is_some_and(|(squares, gain)| {
+        gain - (squares - best.solution.squares) > threshold * best.noise.variance.max(f64::MIN_POSITIVE)
+    })
+}
+
+/// All that a next step may add, at once: what this does not promise to explain, no part of it does.
+fn everything(best: &Described) -> Model {
+    let (floor, about) = (best.model.floor(), best.solution.nonlinear[1]);
+    let degree = match best.model {
+        Model::Ringing(_) => 2,
+        Model::Circuit(equation) => (equation.degree + 2).min(MOST_DEGREES),
+    };
+    let floor = if floor == Floor::Straight { Floor::Bent } else { floor };
+    Model::Circuit(CircuitEquation { degree, core_loss: true, floor, about })
+}
+
 /// The same with a free capacitance law of two degrees, where the model has none: what many rings together may ask for. `None` where it
 /// has one, or none can be fitted.
 pub(super) fn alternative(best: &Described, series: &Series) -> Option<Described> {
     let Model::Ringing(floor) = best.model else { return None };
     let about = best.solution.nonlinear[1];
     let model = Model::Circuit(CircuitEquation { degree: 2, core_loss: false, floor, about });
-    Described::by(model, series, &best.towards(model))
+    let thin = series.thinned(about / TAU, ALTERNATIVE_POINTS);
+    Described::by(model, &thin, &best.towards(model))
 }
 
 /// The models that have a little more, each with what it must explain.
@@ -205,10 +235,10 @@ fn larger(best: &Described) -> Vec<(Model, f64)> {
         Floor::Drooping => {}
     }
     if !equation.core_loss {
-        larger.push((Model::Circuit(CircuitEquation { core_loss: true, ..equation }), MORE));
+        larger.push((Model::Circuit(CircuitEquation { core_loss: true, ..equation }), CURVED));
     }
     // Where one degree more tells nothing, the one after it may.
-    let steps = if equation.degree == 0 { [(1, MORE), (2, CIRCUIT)] } else { [(1, DEGREE), (2, 2.0 * DEGREE)] };
+    let steps = if equation.degree == 0 { [(1, CURVED), (2, CIRCUIT)] } else { [(1, DEGREE), (2, 2.0 * DEGREE)] };
     for (more, threshold) in steps.into_iter().filter(|(more, _)| equation.degree + more <= MOST_DEGREES) {
         let degree = equation.degree + more;
         larger.push((Model::Circuit(CircuitEquation { degree, ..equation }), threshold));

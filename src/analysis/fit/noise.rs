@@ -42,9 +42,9 @@ pub(super) fn noise_at(series: &Series, residual: &[f64], frequency: f64, parame
     if count < 5.0 {
         return whole;
     }
-    // The four parameters of the ring have taken two bins' worth of noise out of the band.
+    // What the fit has taken out of the residuals, two parameters a bin, lies in the band.
     let mut sum = power[low..high].iter().sum::<f64>() * count / (high - low) as f64;
-    let taken = 2.0;
+    let taken = (0.5 * parameters as f64).min(0.5 * count);
     let mut over = BAND[1];
     while high < power.len() - 1 {
         over *= GROWTH;

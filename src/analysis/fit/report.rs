@@ -162,14 +162,17 @@ fn covariance(series: &Series, best: &Described) -> Matrix6<f64> {
     Matrix6::from_fn(|row, column| full[(row, column)])
 }
 
-/// Standard deviation of the residuals at the full rate.
-pub(super) fn residual_v(record: &RingRecord<'_>, fit: &RingFit) -> f64 {
+/// Standard deviation of the residuals at the full rate, whose squares may be known already.
+pub(super) fn residual_v(record: &RingRecord<'_>, fit: &RingFit, squares: Option<f64>) -> f64 {
+    let freedom = record.volts.len().saturating_sub(fit.curve.nonlinear.len() + fit.curve.linear.len()).max(1) as f64;
+    if let Some(squares) = squares {
+        return (squares / freedom).sqrt();
+    }
     let curve = match record.times_s {
         Times::Uneven(times) => curve_v(fit, &times.iter().map(|t| t - fit.start_s).collect::<Vec<_>>()),
         Times::Even { interval_s, .. } => {
             curve_v(fit, &(0..record.volts.len()).map(|n| n as f64 * interval_s).collect::<Vec<_>>())
         }
     };
-    let freedom = record.volts.len().saturating_sub(fit.curve.nonlinear.len() + fit.curve.linear.len()).max(1) as f64;
     (record.volts.iter().zip(&curve).map(|(v, c)| (v - c) * (v - c)).sum::<f64>() / freedom).sqrt()
 }

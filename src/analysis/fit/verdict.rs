@@ -11,8 +11,8 @@ use std::f64::consts::PI;
 
 /// Fewest samples that are looked at: fewer than two a parameter say nothing.
 pub(super) const FEWEST_SAMPLES: usize = 16;
-/// Fewest ring periods in the window.
-const FEWEST_PERIODS: f64 = 3.0;
+/// Fewest ring periods in the window: three, as far as a window can be cut to them.
+const FEWEST_PERIODS: f64 = 2.9;
 /// Fewest samples a period.
 const FEWEST_POINTS: f64 = 5.0;
 /// Fewest vertical steps an amplitude.
@@ -29,6 +29,10 @@ const REMAINDER_SHARE: f64 = 0.03;
 /// Residual of the first quarter, over the ring's amplitude and over the residual of the last, from which it is no noise.
 const MISFIT_SHARE: f64 = 0.01;
 const MISFIT_RATIO: f64 = 3.0;
+/// What the circuit equation may leave, over the ring's amplitude and over the noise, and samples a period that tell the noise.
+const LAW_SHARE: f64 = 0.003;
+const LAW_RATIO: f64 = 5.0;
+const LAW_POINTS: f64 = 25.0;
 /// Rings that are taken out of the residuals one after another.
 const MOST_REMAINDERS: usize = 3;
 /// Distance from a harmonic, over the ring's frequency, within which a remainder may be the ring's own distortion.
@@ -94,7 +98,13 @@ pub(super) fn plausible(tried: &Tried<'_>) -> Result<(), Doubt> {
         let sentence = "what swings in the window does not decay: no free ring, but something that is driven";
         return Err(doubt(DoubtName::NoRing, sentence.to_owned()));
     }
-    if quality < LOWEST_QUALITY || seen < 1.0 {
+    if quality >= LOWEST_QUALITY && seen < 1.0 {
+        let sentence =
+            "less than one period of a ring stands out of the noise: choose a smaller vertical range, or average"
+                .to_owned();
+        return Err(doubt(DoubtName::NoRing, sentence));
+    }
+    if quality < LOWEST_QUALITY {
         let sentence = format!(
             "the record dies away without swinging (quality factor {quality:.1}): it is damped too much to ring"
         );
@@ -180,6 +190,11 @@ fn single(tried: &Tried<'_>) -> Result<Vec<Doubt>, Doubt> {
 
 /// What a fit leaves is noise, as strong at the end as at the beginning, unless more than one ring was there: that dies away.
 fn misfit(tried: &Tried<'_>) -> Option<Doubt> {
+    if tried.shift.is_some()
+        && let Some(doubt) = unlike_any_law(tried)
+    {
+        return Some(doubt);
+    }
     let quarter = tried.residual.len() / 4;
     let rms = |part: &[f64]| (part.iter().map(|r| r * r).sum::<f64>() / part.len() as f64).sqrt();
     let (first, last) = (rms(&tried.residual[..quarter]), rms(&tried.residual[3 * quarter..]));
@@ -189,6 +204,25 @@ fn misfit(tried: &Tried<'_>) -> Option<Doubt> {
             "one damped sinusoid leaves {:.1} % of the ring in its first quarter and little later: something else rings or conducts there; \
              start the window later, or look for a second resonance on the node",
             100.0 * share
+        );
+        doubt(DoubtName::NotOneRing, sentence)
+    })
+}
+
+/// A free law follows much that is no capacitance. What it leaves must then be noise, as quick changes between samples show it.
+fn unlike_any_law(tried: &Tried<'_>) -> Option<Doubt> {
+    let points = tried.record.volts.len() as f64 / (tried.fit.parameters[2] * tried.series.span_s);
+    let thirds = tried.record.volts.windows(4).map(|v| (v[3] - 3.0 * v[2] + 3.0 * v[1] - v[0]).powi(2)).sum::<f64>();
+    // Third differences of white noise have 20 times its variance.
+    let noise = (thirds / 20.0 / tried.record.volts.len() as f64 / tried.series.block as f64).sqrt();
+    let left = (tried.residual.iter().map(|r| r * r).sum::<f64>() / tried.residual.len() as f64).sqrt();
+    let share = left / tried.fit.parameters[0];
+    (points > LAW_POINTS && share > LAW_SHARE && left > LAW_RATIO * noise).then(|| {
+        let sentence = format!(
+            "no capacitance law describes the record: {:.1} % of the ring remain, {:.0} times the noise; start the window later, or look \
+             for a second resonance on the node",
+            100.0 * share,
+            left / noise
         );
         doubt(DoubtName::NotOneRing, sentence)
     })

@@ -132,24 +132,25 @@ fn decay_at_the_start_is_told_where_the_core_loses() {
     }
 }
 
-/// With noise the interval holds the small-signal capacitance as often as it says; the model is chosen by evidence each time.
+/// With noise the interval holds the small-signal frequency as often as it says; the model is chosen by evidence each time.
 #[test]
 fn intervals_hold_the_small_signal_frequency_under_noise() {
-    for (name, law) in LAWS {
+    let (mut inside, mut cases) = (0, 0);
+    for (name, law) in [LAWS[1], LAWS[4], LAWS[7]] {
         for ratio in [30.0, 100.0, 300.0] {
             let clean = made(law, 15.0, 12.0, 100.0, &SERIES);
-            let (mut inside, mut width, count) = (0, 0.0, 60);
+            let (mut own, mut width, count) = (0, 0.0, 30);
             for seed in 0..count {
                 let mut noisy = clean.clone();
-                Maker::new(900 + seed).add_noise(&mut noisy, SWING_V / ratio, None);
+                Maker::new(31 * cases + seed).add_noise(&mut noisy, SWING_V / ratio, None);
                 let got = fit(&noisy).ring.frequency_hz;
-                inside += u32::from((got.value - clean.frequency_hz).abs() < 1.96 * got.standard_uncertainty);
+                own += u32::from((got.value - clean.frequency_hz).abs() < 1.96 * got.standard_uncertainty);
                 width += got.relative_uncertainty() / count as f64;
             }
-            println!(
-                "{name:26} A/s {ratio:3}: {inside} of {count} inside, standard uncertainty {:.4} %",
-                100.0 * width
-            );
+            println!("{name:16} A/s {ratio:3}: {own} of {count} inside, standard uncertainty {:.4} %", 100.0 * width);
+            (inside, cases) = (inside + own, cases + count);
         }
     }
+    // 95 % of 270 less two and a half standard deviations of a binomial count.
+    assert!(inside >= 247, "{inside} of {cases}");
 }
