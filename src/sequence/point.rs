@@ -8,7 +8,10 @@ use super::{
     event::{Event, Point},
     survey::Survey,
 };
-use ringstep_analysis::{findings::Findings, quantity::Measured};
+use ringstep_analysis::{
+    findings::{DoubtName, Findings},
+    quantity::Measured,
+};
 
 /// A point that was measured, with what its event does not tell.
 pub(super) struct MeasuredPoint {
@@ -55,7 +58,8 @@ impl Bench<'_> {
             self.keeper.event(&Event::PointRefused { index, line_v, reason })?;
             return Ok(None);
         }
-        let findings = leakage.into_iter().chain(relaxation).chain([(descent.survey.number, descent.survey.findings)]);
+        let leakage = leakage.into_iter().map(|(number, findings)| (number, about_leakage(findings)));
+        let findings = leakage.chain(relaxation).chain([(descent.survey.number, descent.survey.findings)]);
         let point = Point {
             index,
             line_v,
@@ -97,6 +101,19 @@ impl Bench<'_> {
         periods.sort_by(f64::total_cmp);
         self.facts.switching_period_s = periods.get(periods.len() / 2).copied();
     }
+}
+
+/// A capture of the leakage ring need hold neither several cycles nor a relaxation ring: what it says of them is no doubt.
+fn about_leakage(mut findings: Findings) -> Findings {
+    let beside = [
+        DoubtName::NoRelaxationRing,
+        DoubtName::NoRing,
+        DoubtName::TooFewPeriods,
+        DoubtName::ContinuousConduction,
+        DoubtName::BoardFactMissing,
+    ];
+    findings.doubts.retain(|doubt| !beside.contains(&doubt.name));
+    findings
 }
 
 fn doubts_of(findings: &[(usize, Findings)]) -> String {
