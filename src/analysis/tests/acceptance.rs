@@ -7,7 +7,9 @@ use ringstep_analysis::{
 };
 use std::collections::BTreeMap;
 
-const RECORDS: u64 = 10_000;
+/// Records of the normal run, and of `scripts/acceptance.sh`.
+const RECORDS: u64 = 2_500;
+const ALL_RECORDS: u64 = 10_000;
 
 fn fit(made: &Made) -> Result<Accepted, Refusal> {
     fit_ring(&made.record(), RingKind::Relaxation)
@@ -26,7 +28,23 @@ fn over_seeds<T: Send>(count: u64, one: impl Fn(u64) -> T + Sync) -> Vec<T> {
 
 #[test]
 fn rings_are_accepted_with_the_right_frequency() {
-    let failures: Vec<String> = over_seeds(RECORDS, |seed| {
+    hold_valid(RECORDS);
+}
+
+#[test]
+fn records_without_a_valid_single_ring_are_refused() {
+    hold_invalid(RECORDS);
+}
+
+#[test]
+#[ignore = "long: scripts/acceptance.sh"]
+fn ten_thousand_records_of_each_kind_are_told_apart() {
+    hold_valid(ALL_RECORDS);
+    hold_invalid(ALL_RECORDS);
+}
+
+fn hold_valid(records: u64) {
+    let failures: Vec<String> = over_seeds(records, |seed| {
         let made = Maker::new(seed).ring();
         match fit(&made) {
             Err(refusal) => {
@@ -43,14 +61,13 @@ fn rings_are_accepted_with_the_right_frequency() {
     .into_iter()
     .flatten()
     .collect();
-    println!("{} of {RECORDS} rings refused or wrong", failures.len());
+    println!("{} of {records} rings refused or wrong", failures.len());
     failures.iter().take(20).for_each(|failure| println!("{failure}"));
-    assert!(failures.len() as u64 * 100 <= RECORDS);
+    assert!(failures.len() as u64 * 100 <= records);
 }
 
-#[test]
-fn records_without_a_valid_single_ring_are_refused() {
-    let outcomes = over_seeds(RECORDS, |seed| {
+fn hold_invalid(records: u64) {
+    let outcomes = over_seeds(records, |seed| {
         let mut maker = Maker::new(1_000_000 + seed);
         let (kind, made) = match seed % 10 {
             0 | 1 => ("noise", maker.only_noise()),
@@ -69,7 +86,7 @@ fn records_without_a_valid_single_ring_are_refused() {
     }
     table.iter().for_each(|((kind, name), count)| println!("{kind:>10} {name:<18} {count}"));
     let accepted: Vec<_> = outcomes.iter().filter_map(|(.., accepted)| accepted.as_ref()).collect();
-    println!("{} of {RECORDS} accepted", accepted.len());
+    println!("{} of {records} accepted", accepted.len());
     accepted.iter().take(40).for_each(|what| println!("{what}"));
-    assert!(accepted.len() as u64 * 1000 <= RECORDS);
+    assert!(accepted.len() as u64 * 1000 <= records);
 }
