@@ -41,7 +41,7 @@ impl Budget {
     fn sensitivity_text(&self, component: &Component) -> String {
         let below = component.input.unit.as_str();
         let above = if below == self.unit { "" } else { self.unit.as_str() };
-        let text = match unit_of(above) {
+        let text = match Unit::of_symbol(above) {
             Some(unit) if unit != Unit::One => pair(significant(component.sensitivity), 0.0, above)[0].clone(),
             _ => format!("{} {above}", plain(component.sensitivity)).trim_end().to_owned(),
         };
@@ -56,32 +56,12 @@ impl Budget {
 
 /// Value and uncertainty as text with the same prefix and the decimals that the uncertainty asks for.
 fn pair(value: f64, uncertainty: f64, unit: &str) -> [String; 2] {
-    let known = unit_of(unit);
+    let known = Unit::of_symbol(unit);
     let text = Measured { value, standard_uncertainty: uncertainty }
         .text_with_standard_uncertainty(known.unwrap_or(Unit::One));
     let (value, uncertainty) = text.split_once(" +- ").unwrap_or((&text, "0"));
     let with_unit = |text: &str| if known.is_some() { text.to_owned() } else { format!("{text} {unit}") };
     [with_unit(value), with_unit(uncertainty)]
-}
-
-/// Units whose texts take prefixes; any other is printed as it is.
-const KNOWN: [Unit; 12] = [
-    Unit::Henry,
-    Unit::Farad,
-    Unit::Volt,
-    Unit::Ampere,
-    Unit::Watt,
-    Unit::Hertz,
-    Unit::Second,
-    Unit::Ohm,
-    Unit::Kelvin,
-    Unit::DegreeCelsius,
-    Unit::Percent,
-    Unit::One,
-];
-
-fn unit_of(text: &str) -> Option<Unit> {
-    KNOWN.into_iter().find(|known| known.to_string() == text)
 }
 
 /// Three significant digits of a number that takes no prefix, with an exponent where zeros would hide it.

@@ -2,7 +2,7 @@
 
 use super::{
     RingRecord, Times,
-    curves::{Floor, Line},
+    curves::Line,
     damped_sinusoid::{Base, fit_damped_sinusoid},
     evidence::{Described, Model, alternative, described, first_floor},
     least_squares::project,
@@ -10,7 +10,7 @@ use super::{
     series::Series,
     start::start_values,
 };
-use crate::findings::{Ring, RingFit, RingKind};
+use crate::findings::{FittedFloor, Ring, RingFit, RingKind};
 use std::f64::consts::TAU;
 
 /// Points a period that the choice of the model keeps: block means of a sixty-fourth of a period lose 0.04 % of what could be known.
@@ -99,8 +99,8 @@ fn finish<'a>(
 /// rate. The samples averaged into one in what is returned, the fit, and its sum of squares over all samples.
 fn at_full_rate(record: &RingRecord<'_>, series: &Series, best: Described) -> (usize, Described, Option<f64>) {
     let base = match best.model {
-        Model::Ringing(Floor::Straight) => Base::Straight,
-        Model::Ringing(Floor::Bent) => Base::Bent,
+        Model::Ringing(FittedFloor::Straight) => Base::Straight,
+        Model::Ringing(FittedFloor::Bent) => Base::Bent,
         _ => return (series.block, best, None),
     };
     let start = [best.solution.nonlinear[0], best.solution.nonlinear[1]];

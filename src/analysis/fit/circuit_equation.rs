@@ -1,10 +1,8 @@
 //! The ring of an inductance on a voltage-dependent capacitance, with a loss that may depend on amplitude: the circuit equation
 //! itself, integrated with the derivatives by its parameters.
 
-use super::{
-    curves::{Floor, swings},
-    least_squares::Curve,
-};
+use super::{curves::swings, least_squares::Curve};
+use crate::findings::FittedFloor;
 use nalgebra::DMatrix;
 use std::f64::consts::TAU;
 
@@ -28,7 +26,7 @@ const STEPS: f64 = 48.0;
 pub(super) struct CircuitEquation {
     pub(super) degree: usize,
     pub(super) core_loss: bool,
-    pub(super) floor: Floor,
+    pub(super) floor: FittedFloor,
     /// Angle over the span of the plain fit: the ring's own is not far from it.
     pub(super) about: f64,
 }

@@ -2,20 +2,12 @@
 //! exponentially.
 
 use super::least_squares::Curve;
+use crate::findings::FittedFloor;
 use nalgebra::DMatrix;
 
-/// What a ring stands on. Times run from 0 to about 1 over the window.
-#[derive(Debug, Clone, Copy, PartialEq, Eq)]
-pub(super) enum Floor {
-    /// `offset + slope (t - 1/2)`.
-    Straight,
-    /// The same and `bend (t - 1/2)^2`.
-    Bent,
-    /// `offset + droop exp(-k t)`, with `k` the last nonlinear parameter.
-    Drooping,
-}
-
-impl Floor {
+/// Times run from 0 to about 1 over the window: straight is `offset + slope (t - 1/2)`, bent has `bend (t - 1/2)^2` beside it, drooping is
+/// `offset + droop exp(-k t)` with `k` the last nonlinear parameter.
+impl FittedFloor {
     pub(super) fn terms(self) -> usize {
         if self == Self::Bent { 3 } else { 2 }
     }
@@ -34,7 +26,7 @@ impl Floor {
         }
     }
 
-    /// What [`Floor::Drooping`] may be: from a rate that is as good as a bend to one that is over in a fiftieth of the window.
+    /// What [`FittedFloor::Drooping`] may be: from a rate that is as good as a bend to one that is over in a fiftieth of the window.
     pub(super) fn allows(self, rate: f64) -> bool {
         self != Self::Drooping || (0.02..50.0).contains(&rate)
     }
@@ -45,7 +37,7 @@ pub(super) struct Line;
 
 impl Curve for Line {
     fn columns(&self, _: &[f64], times: &[f64]) -> DMatrix<f64> {
-        DMatrix::from_fn(times.len(), 2, |n, column| Floor::Straight.term(column, 0.0, times[n]))
+        DMatrix::from_fn(times.len(), 2, |n, column| FittedFloor::Straight.term(column, 0.0, times[n]))
     }
 
     fn derivatives(&self, _: &[f64], _: &[f64], times: &[f64]) -> DMatrix<f64> {
@@ -66,7 +58,7 @@ pub(super) fn swings(decay: f64, angle: f64) -> bool {
 }
 
 /// `exp(-a t) (c cos w t + s sin w t) + floor`; nonlinear `a, w` and the floor's rate, linear `c, s` and the floor's terms.
-pub(super) struct Ringing(pub(super) Floor);
+pub(super) struct Ringing(pub(super) FittedFloor);
 
 impl Curve for Ringing {
     fn columns(&self, nonlinear: &[f64], times: &[f64]) -> DMatrix<f64> {

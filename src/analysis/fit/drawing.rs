@@ -1,7 +1,7 @@
 //! A fitted ring as a curve again.
 
-use super::{circuit_equation::CircuitEquation, curves::Floor, evidence::Model, least_squares::Curve};
-use crate::findings::{FittedFloor, RingFit};
+use super::{circuit_equation::CircuitEquation, evidence::Model, least_squares::Curve};
+use crate::findings::RingFit;
 
 /// The fitted curve in volts at times in seconds from the start of the fit's window, ascending.
 pub fn curve_v(fit: &RingFit, times_s: &[f64]) -> Vec<f64> {
@@ -9,11 +9,7 @@ pub fn curve_v(fit: &RingFit, times_s: &[f64]) -> Vec<f64> {
     if curve.linear.is_empty() {
         return times_s.iter().map(|&t| fit.model_v(t)).collect();
     }
-    let floor = match curve.floor {
-        FittedFloor::Straight => Floor::Straight,
-        FittedFloor::Bent => Floor::Bent,
-        FittedFloor::Drooping => Floor::Drooping,
-    };
+    let floor = curve.floor;
     let model = match curve.law_degree {
         None => Model::Ringing(floor),
         Some(degree) => {

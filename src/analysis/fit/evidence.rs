@@ -3,12 +3,12 @@
 
 use super::{
     circuit_equation::{CircuitEquation, MOST_DEGREES},
-    curves::{Floor, Ringing},
+    curves::Ringing,
     least_squares::{Curve, Solution, promised_gain, solve},
     noise::{Noise, noise_at},
     series::Series,
 };
-use crate::findings::RingKind;
+use crate::findings::{FittedFloor, RingKind};
 use nalgebra::DMatrix;
 use std::f64::consts::TAU;
 
@@ -16,14 +16,14 @@ use std::f64::consts::TAU;
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub(super) enum Model {
     /// One damped sinusoid.
-    Ringing(Floor),
+    Ringing(FittedFloor),
     /// The circuit equation.
     Circuit(CircuitEquation),
 }
 
 impl Model {
     /// What the ring stands on.
-    pub(super) fn floor(self) -> Floor {
+    pub(super) fn floor(self) -> FittedFloor {
         match self {
             Self::Ringing(floor) => floor,
             Self::Circuit(equation) => equation.floor,
@@ -86,8 +86,8 @@ const ALTERNATIVE_POINTS: f64 = 32.0;
 const ITERATIONS: usize = 60;
 
 /// The floor that a ring of that kind is given before anything is known.
-pub(super) fn first_floor(kind: RingKind, periods: f64) -> Floor {
-    if kind == RingKind::Leakage && periods >= BENT_PERIODS { Floor::Bent } else { Floor::Straight }
+pub(super) fn first_floor(kind: RingKind, periods: f64) -> FittedFloor {
+    if kind == RingKind::Leakage && periods >= BENT_PERIODS { FittedFloor::Bent } else { FittedFloor::Straight }
 }
 
 impl Described {
@@ -171,7 +171,8 @@ fn better(best: &Described, series: &Series) -> Option<Described> {
     let mut candidates = larger(best);
     if !promises(&everything(best), best, series, SCREEN * MORE.min(DEGREE)) {
         // A drooping floor is no part of everything.
-        candidates.retain(|(model, _)| model.floor() == Floor::Drooping && best.model.floor() == Floor::Bent);
+        candidates
+            .retain(|(model, _)| model.floor() == FittedFloor::Drooping && best.model.floor() == FittedFloor::Bent);
     }
     let mut promising: Vec<(f64, f64, Model)> = candidates
         .into_iter()
@@ -203,7 +204,7 @@ fn everything(best: &Described) -> Model {
         Model::Ringing(_) => 2,
         Model::Circuit(equation) => (equation.degree + 2).min(MOST_DEGREES),
     };
-    let floor = if floor == Floor::Straight { Floor::Bent } else { floor };
+    let floor = if floor == FittedFloor::Straight { FittedFloor::Bent } else { floor };
     Model::Circuit(CircuitEquation { degree, core_loss: true, floor, about })
 }
 
@@ -230,9 +231,9 @@ fn larger(best: &Described) -> Vec<(Model, f64)> {
         Model::Circuit(equation) => Model::Circuit(CircuitEquation { floor, ..equation }),
     };
     match equation.floor {
-        Floor::Straight => larger.push((with_floor(Floor::Bent), MORE)),
-        Floor::Bent => larger.push((with_floor(Floor::Drooping), MORE)),
-        Floor::Drooping => {}
+        FittedFloor::Straight => larger.push((with_floor(FittedFloor::Bent), MORE)),
+        FittedFloor::Bent => larger.push((with_floor(FittedFloor::Drooping), MORE)),
+        FittedFloor::Drooping => {}
     }
     if !equation.core_loss {
         larger.push((Model::Circuit(CircuitEquation { core_loss: true, ..equation }), CURVED));

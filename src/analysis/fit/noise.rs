@@ -1,11 +1,12 @@
 //! What is left after a fit: how strong the noise is where the ring is, and whether another ring stands in it.
 
 use super::{
-    curves::{Floor, Line, Ringing},
+    curves::{Line, Ringing},
     least_squares::{Solution, project, solve},
     series::Series,
     start::{spectrum, start_values},
 };
+use crate::findings::FittedFloor;
 use std::f64::consts::TAU;
 
 /// Noise as the fit of a ring feels it.
@@ -82,7 +83,7 @@ pub(super) fn remainder(series: &Series, residual: &[f64]) -> Option<(Remainder,
     let start = start_values(&left)?;
     let (_, flat) = project(&Line, &left.times, &left.volts, &[])?;
     let flat: f64 = flat.iter().map(|r| r * r).sum();
-    let found = solve(&Ringing(Floor::Straight), &left.times, &left.volts, &start, 30)?;
+    let found = solve(&Ringing(FittedFloor::Straight), &left.times, &left.volts, &start, 30)?;
     let Solution { nonlinear, linear, squares, residual: rest, .. } = found;
     let frequency = nonlinear[1] / TAU;
     let noise = noise_at(&left, &rest, frequency, 6).variance;

@@ -3,7 +3,6 @@
 
 use super::{
     RingRecord, Times, curve_v,
-    curves::Floor,
     evidence::{Described, Model},
     series::Series,
 };
@@ -83,9 +82,9 @@ pub(super) fn ring_fit(record: &RingRecord<'_>, kind: RingKind, series: &Series,
     let first = curve.linear.len() - best.model.floor().terms();
     let floor = &curve.linear[first..];
     let (offset, slope) = match best.model.floor() {
-        Floor::Straight => (floor[0] - 0.5 * floor[1], floor[1]),
-        Floor::Bent => (floor[0] - 0.5 * floor[1] + 0.25 * floor[2], floor[1] - floor[2]),
-        Floor::Drooping => (floor[0] + floor[1], -curve.nonlinear[curve.nonlinear.len() - 1] * floor[1]),
+        FittedFloor::Straight => (floor[0] - 0.5 * floor[1], floor[1]),
+        FittedFloor::Bent => (floor[0] - 0.5 * floor[1] + 0.25 * floor[2], floor[1] - floor[2]),
+        FittedFloor::Drooping => (floor[0] + floor[1], -curve.nonlinear[curve.nonlinear.len() - 1] * floor[1]),
     };
     let parameters = [size, ring.decay_per_s.value, ring.damped_frequency_hz.value, phase, offset, slope / span];
     let covariance = covariance(series, best) * widened(best);
@@ -113,14 +112,9 @@ fn curve(series: &Series, best: &Described) -> FittedCurve {
         Model::Ringing(_) => (None, false),
         Model::Circuit(equation) => (Some(equation.degree), equation.core_loss),
     };
-    let floor = match best.model.floor() {
-        Floor::Straight => FittedFloor::Straight,
-        Floor::Bent => FittedFloor::Bent,
-        Floor::Drooping => FittedFloor::Drooping,
-    };
     FittedCurve {
         span_s: series.span_s,
-        floor,
+        floor: best.model.floor(),
         law_degree,
         core_loss,
         nonlinear: best.solution.nonlinear.clone(),
@@ -153,7 +147,7 @@ fn covariance(series: &Series, best: &Described) -> Matrix6<f64> {
     };
     (by[(4, floor)], by[(4, floor + 1)]) = (1.0, -0.5);
     by[(5, floor + 1)] = 1.0 / span;
-    if model.floor() == Floor::Drooping {
+    if model.floor() == FittedFloor::Drooping {
         let (rate, droop) = (solution.nonlinear[first - 1], solution.linear[solution.linear.len() - 1]);
         by[(4, floor + 1)] = 1.0;
         (by[(5, floor + 1)], by[(5, first - 1)]) = (-rate / span, -droop / span);

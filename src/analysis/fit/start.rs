@@ -2,10 +2,11 @@
 //! block means.
 
 use super::{
-    curves::{Floor, Line, Ringing, swings},
+    curves::{Line, Ringing, swings},
     least_squares::{project, solve},
     series::Series,
 };
+use crate::findings::FittedFloor;
 use realfft::{RealFftPlanner, num_complex::Complex64};
 use std::f64::consts::{PI, TAU};
 
@@ -31,7 +32,7 @@ pub(super) fn start_values(series: &Series) -> Option<[f64; 2]> {
             .map(|quality| [PI * frequency / quality, TAU * frequency])
             .filter(|start| swings(start[0], start[1]))
             .filter_map(|start| {
-                let (_, residual) = project(&Ringing(Floor::Straight), &thin.times, &thin.volts, &start)?;
+                let (_, residual) = project(&Ringing(FittedFloor::Straight), &thin.times, &thin.volts, &start)?;
                 Some((squares(&residual), start))
             })
             .min_by(|a, b| a.0.total_cmp(&b.0));
@@ -42,7 +43,7 @@ pub(super) fn start_values(series: &Series) -> Option<[f64; 2]> {
     tried.sort_by(|a, b| b.0.total_cmp(&a.0));
     let refined = tried.iter().take(2).filter_map(|&(_, frequency, start)| {
         let thin = even.thinned(frequency, POINTS);
-        let found = solve(&Ringing(Floor::Straight), &thin.times, &thin.volts, &start, 30)?;
+        let found = solve(&Ringing(FittedFloor::Straight), &thin.times, &thin.volts, &start, 30)?;
         Some(((flat(&thin)? - found.squares) * thin.block as f64, [found.nonlinear[0], found.nonlinear[1]]))
     });
     refined.max_by(|a, b| a.0.total_cmp(&b.0)).map(|(_, start)| start)
