@@ -15,6 +15,7 @@ mod estimator;
 mod estimator_intervals;
 mod fit;
 mod generate;
+mod joint;
 mod nist;
 mod oracle;
 mod quantity;
