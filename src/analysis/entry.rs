@@ -41,7 +41,7 @@ fn ring_down(samples: &Samples, facts: &BoardFacts) -> Findings {
     match fit::find_ring_down(&record) {
         None => findings.doubt(DoubtName::NoRing, "Nothing in the record rings: it is noise or an aperiodic decay."),
         Some(window) => {
-            let rings = fit_rings(&record, [window], RingKind::Relaxation, &mut findings);
+            let rings = fit_rings([fit::fit_ring(&record.part(window), RingKind::Relaxation)], &mut findings);
             findings.relaxation_ring = fit::combine(&rings);
             circuit_values(&rings, &[], facts, &mut findings);
         }
@@ -65,14 +65,13 @@ fn drain(samples: &Samples, facts: &BoardFacts) -> Findings {
     };
     rates(&segmentation, &mut findings);
     voltages(&segmentation, &mut findings);
-    let record = record(samples);
     let relaxation = longest(&segmentation, |segment| segment.relaxation.as_ref());
-    let relaxation = relaxation.map(|window| settled(samples, window, RingKind::Relaxation));
-    let relaxation = fit_rings(&record, relaxation, RingKind::Relaxation, &mut findings);
+    let relaxation = relaxation.map(|window| settled(samples, &window, RingKind::Relaxation));
+    let relaxation = fit_rings(relaxation, &mut findings);
     findings.relaxation_ring = fit::combine(&relaxation);
     let leakage = longest(&segmentation, |segment| segment.leakage.as_ref());
-    let leakage = leakage.map(|window| settled(samples, window, RingKind::Leakage));
-    let leakage = fit_rings(&record, leakage, RingKind::Leakage, &mut findings);
+    let leakage = leakage.map(|window| settled(samples, &window, RingKind::Leakage));
+    let leakage = fit_rings(leakage, &mut findings);
     findings.leakage_ring = fit::combine(&leakage);
     absences(&segmentation, &mut findings);
     circuit_values(&relaxation, &leakage, facts, &mut findings);
@@ -91,36 +90,30 @@ fn longest(segmentation: &Segmentation, pick: fn(&Segment) -> Option<&RingWindow
     windows.into_iter().cloned().collect::<Vec<_>>().into_iter()
 }
 
-/// The part of a ring that one damped sinusoid describes. At large swings a steep capacitance bends the first periods so far that
+/// Fits a ring, or as much of it as one model describes. At large swings a steep capacitance bends the first periods so far that
 /// none does; once they are left out, the small swings tell the capacitance at the bulk voltage.
-fn settled(samples: &Samples, window: RingWindow, kind: RingKind) -> std::ops::Range<usize> {
-    let record = record(samples);
-    let whole = window.samples.clone();
-    let bent = |part: &std::ops::Range<usize>| {
-        fit::fit_ring(&record.part(part.clone()), kind)
-            .is_err_and(|refusal| refusal.doubt.name == DoubtName::NotOneRing)
+fn settled(samples: &Samples, window: &RingWindow, kind: RingKind) -> Result<Accepted, Refusal> {
+    let (record, whole) = (record(samples), window.samples.clone());
+    let bent = |fitted: &Result<Accepted, Refusal>| {
+        fitted.as_ref().is_err_and(|refusal| refusal.doubt.name == DoubtName::NotOneRing)
     };
-    if !bent(&whole) {
-        return whole;
+    let fitted = fit::fit_ring(&record.part(whole.clone()), kind);
+    if !bent(&fitted) {
+        return fitted;
     }
     let period = window.period_s / samples.mean_interval_s();
     let later = (1..=BENT).filter(|&periods| window.periods - periods as f64 >= REMAIN);
     later
-        .map(|periods| whole.start + (periods as f64 * period) as usize..whole.end)
+        .map(|periods| fit::fit_ring(&record.part(whole.start + (periods as f64 * period) as usize..whole.end), kind))
         .find(|part| !bent(part))
-        .unwrap_or(whole)
+        .unwrap_or(fitted)
 }
 
-fn fit_rings(
-    record: &RingRecord<'_>,
-    windows: impl IntoIterator<Item = std::ops::Range<usize>>,
-    kind: RingKind,
-    findings: &mut Findings,
-) -> Vec<Ring> {
+fn fit_rings(fitted: impl IntoIterator<Item = Result<Accepted, Refusal>>, findings: &mut Findings) -> Vec<Ring> {
     let mut rings: Vec<(Ring, f64)> = Vec::new();
     let mut refused: Vec<Doubt> = Vec::new();
-    for window in windows {
-        match fit::fit_ring(&record.part(window), kind) {
+    for ring in fitted {
+        match ring {
             Ok(Accepted { fit, ring, doubts }) => {
                 rings.push((ring, fit.level_v()));
                 findings.ring_fits.push(fit);

@@ -39,15 +39,11 @@ fn table(budget: &Budget) -> BudgetTable {
     let widened = budget.standard_uncertainty * budget.coverage_factor / COVERAGE_95;
     let value = Measured { value: budget.value, standard_uncertainty: widened };
     let freedom = match budget.effective_degrees_of_freedom {
-        infinite if infinite > 1000.0 => "no end of".to_owned(),
-        finite => format!("{finite:.0}"),
+        many if many > 1000.0 => String::new(),
+        few => format!(", {few:.0} effective degrees of freedom"),
     };
-    let caption = format!(
-        "{}: {} (95 %, coverage factor {:.2}, {freedom} effective degrees of freedom)",
-        budget.result,
-        value.text_with_95_percent_interval(unit),
-        budget.coverage_factor,
-    );
+    let value = text::with_interval(value, unit);
+    let caption = format!("{}: {value} (95 %, coverage factor {:.2}{freedom})", budget.result, budget.coverage_factor);
     BudgetTable { caption, rows: budget.rows() }
 }
 
